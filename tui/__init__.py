@@ -1,0 +1,1 @@
+"""The bench: the full-screen program on top of `study`."""
