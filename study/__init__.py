@@ -1,0 +1,1 @@
+"""The study: its file, its data, its run and the command line."""
