@@ -15,34 +15,33 @@ from __future__ import annotations
 import numpy as np
 
 from estimation.arrays import Matrix
-from estimation.errors import CannotEstimate
 from estimation.line_fit import LineFit
 
 
 def common_coefficients(products: Matrix, *, targets: int) -> Matrix:
-    """γ for each of the first `targets` variables, shape (k, targets).
+    """γ for each of the first `targets` variables, shape (…, k, targets).
 
     Parameters
     ----------
     products
-        Σ k ṽ ṽ′ over both sides, shape (v, v), targets first and then the k covariates.
+        Σ k ṽ ṽ′ over both sides, shape (…, v, v), targets first and then the k covariates.
 
-    Raises
-    ------
-    CannotEstimate
-        When the covariates do not vary, or repeat each other, inside the window.
+    Returns
+    -------
+    NaN where the covariates do not vary, or repeat each other, inside the window.
     """
-    inside = products[targets:, targets:]
-    scale = np.sqrt(np.diag(inside))
-    if not np.all(scale > 0.0):
-        raise CannotEstimate("A covariate does not vary inside the window.", "Leave it out or widen the bandwidth.")
-    correlation = inside / np.outer(scale, scale)
-    if np.linalg.cond(correlation) > 1e12:
-        raise CannotEstimate(
-            "The covariates repeat each other inside the window.", "Leave out those that follow from the others."
-        )
-    against = products[targets:, :targets] / scale[:, None]
-    return np.asarray(np.linalg.solve(correlation, against) / scale[:, None])
+    inside = products[..., targets:, targets:]
+    diagonal = np.diagonal(inside, axis1=-2, axis2=-1)
+    scale = np.sqrt(np.where(diagonal > 0.0, diagonal, np.nan))
+    correlation = inside / (scale[..., :, None] * scale[..., None, :])
+    usable = np.isfinite(correlation).all(axis=(-2, -1))
+    identity = np.eye(inside.shape[-1])
+    correlation = np.where(usable[..., None, None], correlation, identity)
+    usable &= np.linalg.cond(correlation) < 1e12
+    correlation = np.where(usable[..., None, None], correlation, identity)
+    against = products[..., targets:, :targets] / scale[..., None]
+    gamma = np.linalg.solve(correlation, against) / scale[..., None]
+    return np.where(usable[..., None, None], gamma, np.nan)
 
 
 def adjusted(fit: LineFit, targets: int) -> LineFit:

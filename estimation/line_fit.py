@@ -5,6 +5,7 @@ from __future__ import annotations
 from dataclasses import dataclass
 
 from estimation.arrays import Matrix, Vector
+from estimation.errors import CannotEstimate
 from estimation.sample import SideName
 
 
@@ -68,3 +69,12 @@ class LineFit:
     count_above: int
     effective: float
     clusters: int | None
+
+
+def too_few(found: int, *, bandwidth: float, name: str, order: int) -> CannotEstimate:
+    """A side that can't carry a fit of this order with anything left to judge it by."""
+    there = "is 1 distinct score" if found == 1 else f"are {found} distinct scores"
+    return CannotEstimate(
+        f"Within {bandwidth:.6g} {name} the line there {there}; a fit of order {order} needs {order + 2}.",
+        "Widen the bandwidth or lower the order.",
+    )

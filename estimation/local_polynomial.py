@@ -21,9 +21,8 @@ import numpy as np
 
 from estimation.adjustment import common_coefficients
 from estimation.arrays import Matrix, Vector
-from estimation.errors import CannotEstimate
 from estimation.kernels import count_inside, kernel_values
-from estimation.line_fit import Bandwidths, LineFit
+from estimation.line_fit import Bandwidths, LineFit, too_few
 from estimation.sample import Sample, Side, SideName
 from estimation.variance import (
     clustered_spread,
@@ -58,7 +57,7 @@ class SideFit:
 
 
 def fit_side(
-    side: Side, *, bandwidth: float, kernel: str, order: int, name: str = "on one side", resolution: float = 0.0
+    side: Side, *, bandwidth: float, kernel: str, order: int, name: str = "beside", resolution: float = 0.0
 ) -> SideFit:
     """Weights of every coefficient of one side's local fit in d = |x|.
 
@@ -90,20 +89,11 @@ def require_distinct(
     side: Side, count: int, *, order: int, bandwidth: float, name: str, resolution: float
 ) -> None:
     """Refuse a side that can't carry a fit of this order with anything left to judge it by."""
-    needed = order + 2
     found = len(mass_point_starts(side.distance[: min(count, 4096)], resolution))
-    if found < needed and count > 4096:
+    if found < order + 2 and count > 4096:
         found = len(mass_point_starts(side.distance[:count], resolution))
-    if found < needed:
-        raise CannotEstimate(
-            f"Within {bandwidth:.6g} {name} the line there {_are(found, 'distinct score')}; "
-            f"a fit of order {order} needs {needed}.",
-            "Widen the bandwidth or lower the order.",
-        )
-
-
-def _are(count: int, noun: str) -> str:
-    return f"is 1 {noun}" if count == 1 else f"are {count} {noun}s"
+    if found < order + 2:
+        raise too_few(found, bandwidth=bandwidth, name=name, order=order)
 
 
 def fit_rows(
@@ -224,7 +214,9 @@ def _fitted_residuals(side: Side, values: Matrix, fit: SideFit, kind: str) -> Ma
     )
 
 
-def _joint_spread(sample: Sample, below: _SideRows, above: _SideRows, which: str) -> tuple[Matrix, int | None]:
+def _joint_spread(
+    sample: Sample, below: _SideRows, above: _SideRows, which: str
+) -> tuple[Matrix, int | None]:
     low = below.plain_scores if which == "plain" else below.robust_scores
     high = above.plain_scores if which == "plain" else above.robust_scores
     if sample.below.cluster is None or sample.above.cluster is None:

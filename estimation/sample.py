@@ -188,11 +188,16 @@ def build_sample(
 
 
 def outward_order(position: Vector, above: Mask) -> tuple[Codes, Codes]:
-    """Row indices of the lower and of the upper side, nearest to the line first; ties keep file order."""
-    lower, upper = np.flatnonzero(~above), np.flatnonzero(above)
-    lower = lower[np.argsort(-position[lower], kind="stable")]
-    upper = upper[np.argsort(position[upper], kind="stable")]
-    return lower, upper
+    """Row indices of the lower and of the upper side, nearest to the line first."""
+    order = np.argsort(position)
+    split = len(position) - int(np.count_nonzero(above))
+    lower, upper = order[:split][::-1], order[split:]
+    if split and (above[lower].any() or not above[upper].all()):
+        # Sides that do not follow from the position alone (a unit on the line, say): one sort a side.
+        lower, upper = np.flatnonzero(~above), np.flatnonzero(above)
+        lower = lower[np.argsort(-position[lower])]
+        upper = upper[np.argsort(position[upper])]
+    return np.ascontiguousarray(lower), upper
 
 
 def _take_side(

@@ -73,21 +73,50 @@ def _residuals_with_ties(
     return np.asarray((values - mean) * np.sqrt(others / (others + 1.0)))
 
 
-def _residuals_without_ties(
-    distance: Vector, values: Matrix, resolution: float, neighbours: int
-) -> Matrix:
+def _residuals_without_ties(distance: Vector, values: Matrix, resolution: float, neighbours: int) -> Matrix:
     """The same with one row a point, in blocks that stay in the processor's cache."""
-    n, pad, block = len(distance), neighbours + 1, 1 << 16
+    n, block = len(distance), 1 << 14
     result = np.empty_like(values)
     for start in range(0, n, block):
-        low, high = max(0, start - pad), min(n, start + block + pad)
-        points, chunk = distance[low:high], values[low:high]
-        count, total = _grow_windows(points, np.ones(len(points), np.int64), chunk, resolution, neighbours)
-        others = np.maximum(count - 1, 1)[:, None]
-        residual = (chunk - (total - chunk) / others) * np.sqrt(others / (others + 1.0))
         stop = min(start + block, n)
+        low, high = max(0, start - neighbours - 1), min(n, stop + neighbours + 1)
+        residual = _slide(distance[low:high], values[low:high], resolution, neighbours)
         result[start:stop] = residual[start - low : stop - low]
     return result
+
+
+def _slide(points: Vector, values: Matrix, resolution: float, neighbours: int) -> Matrix:
+    """Among the J + 1 runs of J + 1 rows that hold a row, the one that reaches least far is its neighbourhood.
+
+    Two runs reach equally far when the J-th neighbour is tied between the sides: both ends are kept.
+    """
+    n, j = len(points), min(neighbours, len(points) - 1)
+    edge = np.full(j, np.inf)
+    padded = np.concatenate((-edge, points, edge))
+    filled = np.concatenate((np.zeros((j, values.shape[1])), values, np.zeros((j, values.shape[1]))))
+
+    def lag(array: Matrix, k: int) -> Matrix:
+        return array[j + k : j + k + n]
+
+    reaches = [np.maximum(points - lag(padded, -k), lag(padded, j - k) - points) for k in range(j + 1)]
+    nearest = np.minimum.reduce(reaches) + resolution
+    total = np.zeros_like(values)
+    unsettled = np.ones(n, dtype=bool)
+    tied = np.zeros(n)
+    window = sum(lag(filled, k) for k in range(j + 1))
+    for k in range(j + 1):
+        best = reaches[k] <= nearest
+        first = best & unsettled
+        again = best & ~unsettled
+        total[first] = window[first]
+        if again.any():
+            total[again] += lag(filled, -k)[again]
+            tied[again] += 1.0
+        unsettled &= ~best
+        if k < j:
+            window = window + lag(filled, -k - 1) - lag(filled, j - k)
+    others = (j + tied)[:, None]
+    return np.asarray((values - (total - values) / others) * np.sqrt(others / (others + 1.0)))
 
 
 def _grow_windows(
