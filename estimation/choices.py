@@ -6,7 +6,7 @@ from dataclasses import dataclass
 from typing import Final
 
 KERNELS: Final = ("triangular", "uniform", "epanechnikov")
-BANDWIDTH_RULES: Final = ("mse", "coverage", "bias-aware")
+BANDWIDTH_RULES: Final = ("mse", "coverage", "bias-aware", "mse per side", "coverage per side")
 PILOT_RULES: Final = ("same", "mse")
 INTERVALS: Final = ("robust", "bias-aware", "plain")
 VARIANCES: Final = ("neighbour", "hc0", "hc1", "hc2", "hc3")

@@ -11,7 +11,7 @@ Fan, J. & Gijbels, I. (1996). Local Polynomial Modelling and Its Applications. C
 
 from __future__ import annotations
 
-from typing import Final
+from typing import Final, Literal
 
 import numpy as np
 
@@ -47,7 +47,7 @@ def kernel_values(distance: Vector, bandwidth: float, kernel: str) -> Vector:
 
 def count_inside(distance: Vector, bandwidth: float, kernel: str) -> int:
     """Rows with a positive kernel weight, given distances in ascending order."""
-    edge = "right" if kernel == "uniform" else "left"
+    edge: Literal["left", "right"] = "right" if kernel == "uniform" else "left"
     return int(np.searchsorted(distance, bandwidth, side=edge))
 
 

@@ -332,7 +332,7 @@ def _unit_bias(
         return np.full(len(bandwidth), np.inf)
     if size == 2:
         second = np.einsum("hj,hj->h", level_weights, moments[:, 2 : 2 + size, 0]).astype(np.float64)
-        return 0.5 * np.abs(second) * bandwidth**2
+        return np.asarray(0.5 * np.abs(second) * bandwidth**2)
     polynomial = _weights_polynomial(kernel, level_weights, np.ones(len(bandwidth)))
     return np.array(
         [_integral(side, kernel, float(h), row) for h, row in zip(bandwidth, polynomial, strict=True)]

@@ -54,7 +54,7 @@ class Channels:
     @cached_property
     def squared_weight(self) -> int:
         """Σ w²."""
-        return self.first.stop
+        return 1 + self.variables
 
     @cached_property
     def spread(self) -> slice:
@@ -186,7 +186,7 @@ def _sum_blocks(powered: npt.NDArray[Any], columns: npt.NDArray[Any], blocks: in
     left = powered.reshape(blocks, -1, powered.shape[1])
     right = columns.reshape(blocks, -1, columns.shape[1])
     if left.dtype == np.float64:
-        return np.matmul(left.transpose(0, 2, 1), right)
+        return np.asarray(np.matmul(left.transpose(0, 2, 1), right))
     # Extended precision has no fast matrix product; channel by channel keeps the temporaries small.
     return np.stack([(left * right[:, :, j, None]).sum(axis=1) for j in range(right.shape[2])], axis=2)
 

@@ -103,7 +103,7 @@ def _slide(points: Vector, values: Matrix, resolution: float, neighbours: int) -
     total = np.zeros_like(values)
     unsettled = np.ones(n, dtype=bool)
     tied = np.zeros(n)
-    window = sum(lag(filled, k) for k in range(j + 1))
+    window = np.sum([lag(filled, k) for k in range(j + 1)], axis=0)
     for k in range(j + 1):
         best = reaches[k] <= nearest
         first = best & unsettled
@@ -197,4 +197,5 @@ def clustered_spread(scores: Matrix, cluster: Codes) -> Spread:
     names, code = np.unique(cluster, return_inverse=True)
     count = len(names)
     sums = np.stack([np.bincount(code, weights=column, minlength=count) for column in scores.T], axis=1)
-    return Spread(covariance=sums.T @ sums * (count / max(count - 1, 1)), clusters=count)
+    covariance = np.asarray(sums.T @ sums * (count / max(count - 1, 1)), dtype=np.float64)
+    return Spread(covariance=covariance, clusters=count)
