@@ -162,6 +162,8 @@ def _theme(name: str, *, dark: bool, accent: str, muted: str, faint: str, cursor
         panel=plain,
         boost=plain,
         variables={
+            "ansi-background": "ansi_black" if dark else "ansi_white",
+            "ansi-foreground": "ansi_white" if dark else "ansi_black",
             "text-muted": muted,
             "text-disabled": faint,
             "foreground-muted": muted,
