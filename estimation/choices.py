@@ -36,6 +36,8 @@ class Choices:
         outcome per squared unit of score; "auto" takes a rule of thumb from the data.
     donut
         Rows with |score − cutoff| below this are left out, in units of the score.
+    adjust
+        Whether the covariates adjust the headline; where there are any, both answers are reported.
     """
 
     bandwidth: str | float | tuple[float, float] = "mse"
@@ -47,3 +49,4 @@ class Choices:
     variance: str = "neighbour"
     curvature: str | float = "auto"
     donut: float = 0.0
+    adjust: bool = False

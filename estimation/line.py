@@ -1,0 +1,316 @@
+"""One outcome at one line, prepared once: bandwidths, readings, sweeps, curves and bins are asked of it."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass, replace
+
+import numpy as np
+
+from estimation.adjustment import adjusted
+from estimation.arrays import Codes, Vector
+from estimation.bandwidth import ScoreSpread, choose_bandwidths, rule_of_thumb_curvature
+from estimation.choices import Choices
+from estimation.errors import CannotEstimate
+from estimation.inference import critical_values, quantile
+from estimation.ladder import Ladder, LineFits, Widths
+from estimation.line_fit import Bandwidths, LineFit
+from estimation.local_polynomial import fit_rows
+from estimation.moments import SideSums, combine, hankel, kernel_coefficients, solve
+from estimation.reading import Reading, read_fit
+from estimation.sample import Sample, SideName
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Sweep:
+    """The effect at each of H common bandwidths, NaN where it can't be estimated, each shape (H,)."""
+
+    bandwidth: Vector
+    estimate: Vector
+    std_error: Vector
+    low: Vector
+    high: Vector
+    count_below: Codes
+    count_above: Codes
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class CurveSide:
+    """One side's fitted curve with its pointwise band, each shape (points,); x is score minus cutoff."""
+
+    x: Vector
+    fit: Vector
+    low: Vector
+    high: Vector
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Curve:
+    """The local fits on both sides."""
+
+    below: CurveSide
+    above: CurveSide
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class BinSide:
+    """Binned means of one side, from the line outward: centre (score minus cutoff), mean, rows; empty bins left out."""
+
+    centre: Vector
+    mean: Vector
+    count: Codes
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Bins:
+    """Binned means on both sides."""
+
+    below: BinSide
+    above: BinSide
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Line:
+    """A sample with its running sums and the choices that are asked of it.
+
+    Attributes
+    ----------
+    sample
+        Rows of both sides, donut taken out, without covariates.
+    ladder
+        Its running sums.
+    with_covariates, covariate_ladder
+        The rows that have every covariate, with them; None where the study has none.
+    choices
+        How the effect is estimated.
+    curvature
+        Bounds on the second derivative, shape (targets,): the outcome's, then take-up's.
+    spread
+        What the first bandwidth needs of the scores.
+    """
+
+    sample: Sample
+    ladder: Ladder
+    choices: Choices
+    curvature: Vector
+    spread: ScoreSpread
+    with_covariates: Sample | None = None
+    covariate_ladder: Ladder | None = None
+
+    @classmethod
+    def prepare(cls, sample: Sample, choices: Choices, with_covariates: Sample | None = None) -> Line:
+        """Sum the rows once.
+
+        Parameters
+        ----------
+        sample
+            Rows of both sides, before any donut, values without covariates.
+        with_covariates
+            The same line with covariates among the values (and fewer rows where some are missing).
+        """
+        kept = sample.without_donut(choices.donut)
+        ladder = Ladder.build(kept, kernel=choices.kernel, order=choices.order)
+        full = None if with_covariates is None else with_covariates.without_donut(choices.donut)
+        return cls(
+            sample=kept,
+            ladder=ladder,
+            choices=choices,
+            curvature=_curvature(ladder, choices),
+            spread=ScoreSpread.of(kept),
+            with_covariates=full,
+            covariate_ladder=(
+                None
+                if full is None
+                else Ladder.build(full, kernel=choices.kernel, order=choices.order, adjust=True)
+            ),
+        )
+
+    def choosing(self, choices: Choices) -> Line:
+        """The same line under other choices; sums are kept unless the choices need other ones."""
+        old = self.choices
+        if (choices.kernel, choices.donut) != (old.kernel, old.donut) or choices.order > self.ladder.order:
+            raise ValueError("these choices need the rows summed again")
+        return replace(self, choices=choices, curvature=_curvature(self.ladder, choices))
+
+    @property
+    def fuzzy(self) -> bool:
+        """Whether take-up stands beside the outcome."""
+        return self.sample.has_take_up
+
+    @property
+    def on_ladder(self) -> bool:
+        """Whether readings come from running sums, at once for any number of rows."""
+        return self.choices.variance == "neighbour" and self.sample.below.cluster is None
+
+    def bandwidths(self) -> Bandwidths:
+        """What the choices ask for; covariates never move it."""
+        return choose_bandwidths(self.ladder, self.spread, self.choices)
+
+    def at(self, bandwidth: float) -> Bandwidths:
+        """One width for both sides, with the pilot that the choices ask for."""
+        pilot = self._fixed_pilot()
+        return Bandwidths.common(bandwidth, pilot)
+
+    def _fixed_pilot(self) -> float | None:
+        """The pilot where it does not follow the bandwidth."""
+        if self.choices.pilot == "same":
+            return None
+        return choose_bandwidths(self.ladder, self.spread, replace(self.choices, bandwidth=1.0)).pilot_below
+
+    def fit(self, bandwidths: Bandwidths, *, adjust: bool = False) -> LineFit:
+        """The fit at one pair of widths, with the study's variance, covariates taken off where asked."""
+        sample, ladder = self.sample, self.ladder
+        if adjust:
+            if self.with_covariates is None or self.covariate_ladder is None:
+                raise CannotEstimate(
+                    "There is no covariate to adjust for.", "Name covariates in the study first."
+                )
+            sample, ladder = self.with_covariates, self.covariate_ladder
+        if self.on_ladder:
+            fit = ladder.fit(bandwidths, order=self.choices.order, adjust=adjust)
+        else:
+            fit = fit_rows(
+                sample,
+                bandwidths,
+                kernel=self.choices.kernel,
+                order=self.choices.order,
+                variance=self.choices.variance,
+                adjust=adjust,
+            )
+        return adjusted(fit, 1 + int(self.fuzzy)) if adjust else fit
+
+    def reading(self, bandwidths: Bandwidths, *, adjust: bool | None = None) -> Reading:
+        """The effect with its intervals; adjusted as the choices say unless told otherwise."""
+        take_off = self.choices.adjust if adjust is None else adjust
+        fit = self.fit(bandwidths, adjust=take_off)
+        return read_fit(fit, level=self.choices.level, curvature=self.curvature, fuzzy=self.fuzzy)
+
+    def sweep(self, bandwidth: Vector, should_stop: Callable[[], bool] | None = None) -> Sweep:
+        """The effect and the study's chosen interval at many common widths.
+
+        Parameters
+        ----------
+        bandwidth
+            Shape (H,).
+        should_stop
+            Asked between widths where each costs a pass over rows; the rest stay NaN once it answers True.
+        """
+        if self.on_ladder and not self.fuzzy and not self.choices.adjust:
+            fits = self.ladder.fits(Widths.common(bandwidth, self._fixed_pilot()), order=self.choices.order)
+            return self._sweep_from(bandwidth, fits)
+        rows = np.full((4, len(bandwidth)), np.nan)
+        counts = np.zeros((2, len(bandwidth)), dtype=np.int64)
+        for i, width in enumerate(bandwidth):
+            if should_stop is not None and should_stop():
+                break
+            try:
+                reading = self.reading(self.at(float(width)))
+            except CannotEstimate:
+                continue
+            low, high = leading_interval(reading, self.choices.interval)
+            rows[:, i] = (reading.estimate, reading.std_error, low, high)
+            counts[:, i] = (reading.count_below, reading.count_above)
+        return Sweep(
+            bandwidth=bandwidth,
+            estimate=rows[0],
+            std_error=rows[1],
+            low=rows[2],
+            high=rows[3],
+            count_below=counts[0],
+            count_above=counts[1],
+        )
+
+    def _sweep_from(self, bandwidth: Vector, fits: LineFits) -> Sweep:
+        level, which = self.choices.level, self.choices.interval
+        error = np.sqrt(np.maximum(fits.covariance[:, 0, 0], 0.0))
+        centre = fits.jump[:, 0]
+        if which == "robust":
+            centre = fits.robust_jump[:, 0]
+            reach = quantile(level) * np.sqrt(np.maximum(fits.robust_covariance[:, 0, 0], 0.0))
+        elif which == "plain":
+            reach = quantile(level) * error
+        else:
+            safe = np.where(error > 0.0, error, np.nan)
+            bias = np.where(np.isfinite(fits.unit_bias), fits.unit_bias * self.curvature[0], np.nan)
+            reach = critical_values(bias / safe, level) * error
+        return Sweep(
+            bandwidth=bandwidth,
+            estimate=fits.jump[:, 0],
+            std_error=error,
+            low=centre - reach,
+            high=centre + reach,
+            count_below=fits.count_below,
+            count_above=fits.count_above,
+        )
+
+    def curve(self, bandwidths: Bandwidths, points: int = 60) -> Curve:
+        """Both local fits from the line to the edge of the bandwidth, with pointwise plain intervals."""
+
+        def side_curve(side: SideSums, name: SideName) -> CurveSide:
+            width = bandwidths.of(name)[0]
+            u = np.linspace(0.0, 1.0, points)
+            fit, error = _curve_of(side, width, self.ladder.kernel, self.choices.order, u)
+            reach = quantile(self.choices.level) * error
+            sign = -1.0 if name == "below" else 1.0
+            return CurveSide(x=sign * u * width, fit=fit, low=fit - reach, high=fit + reach)
+
+        return Curve(
+            below=side_curve(self.ladder.below, "below"), above=side_curve(self.ladder.above, "above")
+        )
+
+    def bins(self, reach: float, count: int, *, variable: int = 0) -> Bins:
+        """Means of `count` equal bins a side out to `reach`, from running sums."""
+
+        def side_bins(side: SideSums, sign: float) -> BinSide:
+            edges = np.linspace(0.0, reach, count + 1)
+            edges[-1] *= 1.0 + 1e-12  # a row at exactly the reach belongs to the last bin
+            sums = side.raw(edges[1:], np.full(count, reach), "triangular")[:, 0]
+            sums = np.diff(np.concatenate((np.zeros((1, sums.shape[1]), sums.dtype), sums)), axis=0)
+            rows = np.diff(side.count(edges[1:], "triangular"), prepend=0)
+            filled = rows > 0
+            total = np.where(filled, sums[:, 0], 1.0)
+            mean = (sums[:, 1 + variable] / total + side.centre[variable]).astype(np.float64)
+            centre = sign * 0.5 * (edges[:-1] + edges[1:])
+            return BinSide(centre=centre[filled], mean=mean[filled], count=rows[filled])
+
+        return Bins(below=side_bins(self.ladder.below, -1.0), above=side_bins(self.ladder.above, 1.0))
+
+    @property
+    def binary(self) -> bool:
+        """Whether the outcome is nought or one in every row."""
+        return all(bool(np.isin(side.outcome, (0.0, 1.0)).all()) for _, side in self.sample.sides)
+
+
+def leading_interval(reading: Reading, which: str) -> tuple[float, float]:
+    """(low, high) of the chosen interval; NaN where it can't be had."""
+    if which == "bias-aware":
+        honest = reading.bias_aware
+        return (float("nan"), float("nan")) if honest is None else (honest.low, honest.high)
+    found = reading.robust if which == "robust" else reading.plain
+    return (found.low, found.high)
+
+
+def _curve_of(side: SideSums, width: float, kernel: str, order: int, u: Vector) -> tuple[Vector, Vector]:
+    """Fitted outcome and its standard error at d = u·width, each shape (points,)."""
+    h = np.array([width])
+    raw = side.raw(h, h, kernel)
+    shape = kernel_coefficients(kernel)
+    size = order + 1
+    moments = combine(raw, shape, 2 * size)
+    identity = np.eye(size, dtype=np.longdouble)[None]
+    inverse = solve(hankel(moments[:, :, 0], size), identity)[0]
+    coefficients = inverse @ moments[0, :size, 1]
+    squares = combine(raw, np.convolve(shape, shape), 2 * size - 1)[0, :, side.channels.spread.start]
+    index = np.arange(size)
+    spread = inverse @ squares[index[:, None] + index[None, :]] @ inverse
+    basis = np.vander(u, size, increasing=True)
+    fit = (basis @ coefficients + side.centre[0]).astype(np.float64)
+    error = np.sqrt(np.maximum(np.einsum("ni,ij,nj->n", basis, spread, basis), 0.0)).astype(np.float64)
+    return fit, error
+
+
+def _curvature(ladder: Ladder, choices: Choices) -> Vector:
+    bounds = rule_of_thumb_curvature(ladder)
+    if not isinstance(choices.curvature, str):
+        bounds[0] = choices.curvature
+    return bounds
