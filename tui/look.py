@@ -73,8 +73,8 @@ _INKS: dict[str, dict[Ink, str]] = {
     },
 }
 _PAPERS: dict[str, dict[Paper, str]] = {
-    DARK: {Paper.PLAIN: "", Paper.BAND: " on color(236)", Paper.CURSOR: " on color(238)"},
-    LIGHT: {Paper.PLAIN: "", Paper.BAND: " on color(254)", Paper.CURSOR: " on color(252)"},
+    DARK: {Paper.PLAIN: "", Paper.BAND: " on color(235)", Paper.CURSOR: " on color(238)"},
+    LIGHT: {Paper.PLAIN: "", Paper.BAND: " on color(255)", Paper.CURSOR: " on color(252)"},
     TERMINAL: {Paper.PLAIN: "", Paper.BAND: "", Paper.CURSOR: " reverse"},
 }
 
@@ -82,6 +82,9 @@ _PAPERS: dict[str, dict[Paper, str]] = {
 @lru_cache(maxsize=512)
 def _style(theme: str, ink: int, paper: int, bold: bool, colour: bool) -> Style:
     words = _INKS[theme][Ink(ink)] + _PAPERS[theme][Paper(paper)] + (" bold" if bold else "")
+    if "reverse" in words:
+        # Reversed, every ink would become a background of its own: a patchwork instead of one bar.
+        words = "bold reverse" if "bold" in words else "reverse"
     style = Style.parse(words)
     return style if colour else style.without_color
 

@@ -102,6 +102,39 @@ def tick_labels(ticks: Sequence[float]) -> list[str]:
     return [f"{tick + 0.0:,.{decimals}f}" for tick in ticks]
 
 
+def even_scale(low: float, high: float, rows: int, *, from_zero: bool = False) -> Scale:
+    """Return a scale for so many rows on which round ticks stand equally many rows apart.
+
+    Parameters
+    ----------
+    low, high : float
+        What must be inside.
+    rows : int
+        Rows of the area.
+    from_zero : bool
+        The scale begins exactly at 0 (for counts); else a tick lies in the middle of its row.
+
+    Notes
+    -----
+    A row is worth a round step divided by a whole number of rows, the smallest such worth that holds the interval with half a row to
+    spare at both ends. So labels have one rhythm and say exactly where they point.
+    """
+    low, high = (0.0, high if high > 0 else 1.0) if from_zero else padded(low, high, 0.0)
+    span = high - low
+    usable = max(1, rows) if from_zero else max(1, rows - 1)
+    worth = math.inf
+    for between in range(2, 6):
+        worth = min(worth, nice_step(between * span / usable) / between)
+    if from_zero:
+        return Scale(low=0.0, high=rows * worth)
+    bottom = (math.floor((low + high - rows * worth) / 2 / worth + 0.5) + 0.5) * worth
+    if bottom > low:
+        bottom -= worth
+    elif bottom + rows * worth < high:
+        bottom += worth
+    return Scale(low=bottom, high=bottom + rows * worth)
+
+
 def padded(low: float, high: float, share: float = 0.06) -> tuple[float, float]:
     """Return the interval with some air at both ends; an empty one becomes one unit wide or a tenth of its value."""
     if high > low:
@@ -130,7 +163,7 @@ class PlotArea:
 
     def _cells(self, share: Vector, cells: int, offset: int) -> Cells:
         inside = (share >= -1e-9) & (share <= 1 + 1e-9)
-        place = np.where(inside, np.nan_to_num(share) * cells, 0.0)
+        place = np.where(inside, share, 0.0) * cells
         return np.where(inside, np.clip(place.astype(np.intp), 0, cells - 1) + offset, -1)
 
     # ---- drawing --------------------------------------------------------------------------------------------
@@ -226,6 +259,8 @@ class PlotArea:
             What the numbers are; labels that would touch it are left out.
         """
         row = self.top + self.height
+        if len(name) > self.width // 3:
+            name = name[: self.width // 3] + "…"
         places, words = self._x_ticks(labels_shift)
         columns = self.columns(places).tolist()
         self.canvas.horizontal(row, range(self.left, self.left + self.width), "─", Ink.FAINT, only_blank=False)

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
+
 from rich.cells import cell_len, set_cell_size
 
 from tui.look import Look
@@ -19,6 +21,16 @@ def fit(words: str, cells: int, look: Look) -> str:
     if cells <= 0:
         return ""
     return set_cell_size(words, cells - 1).rstrip() + ("~" if look.ascii_only else "…")
+
+
+def shape(counts: Sequence[int], look: Look) -> str:
+    """Return a histogram one row high, a character a count; never a full cell, so that rows under each other stay apart."""
+    levels = " .:-=#" if look.ascii_only else " ▁▂▃▄▅▆"
+    most = max(counts, default=0)
+    if most <= 0:
+        return " " * len(counts)
+    # Anything at all is seen: the lowest level is for 0 only.
+    return "".join(levels[-(-count * (len(levels) - 1) // most)] for count in counts)
 
 
 def pad_decimal(words: str, after: int) -> str:

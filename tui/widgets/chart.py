@@ -11,7 +11,7 @@ import numpy.typing as npt
 from study.literal import clean
 from tui.canvas import Canvas, narrow
 from tui.look import Ink
-from tui.plot_area import PlotArea, Scale, gutter, padded
+from tui.plot_area import PlotArea, Scale, even_scale, gutter
 from tui.widgets.plot import PlotWidget
 
 Vector = npt.NDArray[np.float64]
@@ -145,13 +145,13 @@ class EffectChart(PlotWidget):
             bottom, top = self._heights
             if bottom <= low and high <= top and (high - low) > 0.5 * (top - bottom):
                 return self._heights
-        return padded(low, high)
+        return low, high
 
     def draw(self, canvas: Canvas) -> None:
         """Draw band, fit, means, cutoff and axes, in that order."""
         assert self._bins is not None and self._heights is not None
-        y = Scale(low=self._heights[0], high=self._heights[1])
         height = canvas.height - 3
+        y = even_scale(*self._heights, height)
         left = gutter(y, height)
         width = canvas.width - left
         width -= 1 - width % 2  # an odd width has the cutoff in the middle of a cell

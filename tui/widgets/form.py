@@ -37,7 +37,7 @@ class Choice:
     typed : str
         What may be typed instead: "nothing", "number" or "text".
     help : str
-        One sentence, shown beside the line when there is room, else below the form for the line under the cursor.
+        One sentence, shown beside the line while the cursor is on it.
     why_not : str
         When given, the line cannot be changed now and this says why; it is dimmed, not hidden.
     """
@@ -208,8 +208,9 @@ class ChoiceForm(CursorView):
             Segment(label + " " * (labels - cell_width(label) + 2), quiet),
             *self._draw_value(choice, here, values, look, paper),
         ]
-        said = choice.why_not or choice.help
-        style = look.style(Ink.MUTED if here else Ink.FAINT, paper)
+        # One help line at a time: six sentences at once are read by nobody.
+        said = choice.why_not or (choice.help if here else "")
+        style = look.style(Ink.MUTED, paper)
         if here and self._refused:
             said, style = self._refused, look.style(Ink.WARNING, paper)
         used = sum(cell_width(segment.text) for segment in segments)

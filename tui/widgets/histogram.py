@@ -13,7 +13,7 @@ from textual.message import Message
 from study.literal import clean
 from tui.canvas import Canvas, narrow
 from tui.look import Ink
-from tui.plot_area import PlotArea, Scale, gutter, nice_step
+from tui.plot_area import PlotArea, Scale, even_scale, gutter, nice_step
 from tui.widgets.plot import PlotWidget
 
 Vector = npt.NDArray[np.float64]
@@ -168,16 +168,16 @@ class ScoreHistogram(PlotWidget, can_focus=True):
         high = high if high > low else low + 1.0
         height = canvas.height - 4
         most, per_cell = self._per_cell(canvas.width - 7, low, high)
-        y = Scale(low=0.0, high=most)
+        y = even_scale(0.0, most, height, from_zero=True)
         left = gutter(y, height)
         most, per_cell = self._per_cell(canvas.width - left, low, high)
-        y = Scale(low=0.0, high=most)
+        y = even_scale(0.0, most, height, from_zero=True)
         x = Scale(low=low, high=high)
         area = PlotArea(canvas, left=left, top=2, width=canvas.width - left, height=height, x=x, y=y)
         line = -1 if self._cutoff is None else int(area.columns([self._cutoff])[0])
-        self._draw_columns(area, per_cell / most, line)
+        self._draw_columns(area, per_cell / y.high, line)
         area.y_labels()
-        area.x_axis(name=self._score)
+        area.x_axis()
         canvas.text(0, 0, f"{self._score}: how many have which score", Ink.STRONG)
         if line >= 0:
             self._draw_line(area, line)
@@ -204,7 +204,7 @@ class ScoreHistogram(PlotWidget, can_focus=True):
         treated = np.zeros(area.width, dtype=np.bool_)
         if line >= 0:
             treated = column > line if self._treated == "above" else column < line
-        inks = np.where(treated, Ink.ACCENT, Ink.MUTED).astype(np.uint8)
+        inks = np.where(treated, Ink.EDGE, Ink.FAINT).astype(np.uint8)
         for eighth in range(1, 9):
             rows, columns = np.nonzero(level == eighth)
             area.canvas.marks(columns + area.left, rows + area.top, _EIGHTHS[eighth], inks[columns])

@@ -12,7 +12,7 @@ import numpy.typing as npt
 from study.literal import clean
 from tui.canvas import Canvas, narrow
 from tui.look import Ink
-from tui.plot_area import PlotArea, Scale, gutter, padded
+from tui.plot_area import PlotArea, Scale, even_scale, gutter
 from tui.widgets.plot import PlotWidget
 
 Vector = npt.NDArray[np.float64]
@@ -101,8 +101,7 @@ class SweepChart(PlotWidget):
         """Draw band, sweep, zero, the standing mark and the axes."""
         assert self._sweep is not None
         widths = np.asarray(self._sweep.bandwidth, dtype=np.float64)
-        low, high = _heights(self._sweep)
-        y = Scale(low=low, high=high)
+        y = even_scale(*_heights(self._sweep), canvas.height - 3)
         left = gutter(y, canvas.height - 3)
         x = Scale(low=float(widths[0]), high=float(widths[-1]) if widths[-1] > widths[0] else 2 * float(widths[0]), log=True)
         area = PlotArea(
@@ -160,8 +159,8 @@ def _heights(sweep: EffectByWidth) -> tuple[float, float]:
     known = np.isfinite(low) & np.isfinite(high) & np.isfinite(estimate)
     if not known.any():
         numbers = estimate[np.isfinite(estimate)]
-        return padded(min(0.0, float(numbers.min())), max(0.0, float(numbers.max())))
+        return min(0.0, float(numbers.min())), max(0.0, float(numbers.max()))
     low, high, estimate = low[known], high[known], estimate[known]
     bottom = min(0.0, float(np.quantile(low, 0.1)), float(np.quantile(estimate, 0.05)))
     top = max(0.0, float(np.quantile(high, 0.9)), float(np.quantile(estimate, 0.95)))
-    return padded(bottom, top)
+    return bottom, top
