@@ -87,10 +87,13 @@ fi
 
 case $want in run) lock=requirements.lock ;; dev) lock=requirements-dev.lock ;; esac
 # The project itself comes last, built with the locked backend, so that no build fetches anything.
-if ! pip_install --require-hashes --no-deps -r "$lock" ||
-    ! pip_install --no-deps --no-build-isolation --editable .; then
+if ! pip_install --require-hashes --no-deps -r "$lock"; then
     say "The packages could not be installed; pip's own words are in $log."
     refuse "Check that this machine reaches its package index (or set pip's index-url to a mirror), then run the same command again."
+fi
+if ! pip_install --no-deps --no-build-isolation --editable .; then
+    say "The packages are there, but Cutbank itself could not be installed; pip's own words are in $log."
+    refuse "Is this a whole checkout? Compare it with 'git status', then run the same command again."
 fi
 
 made_from "$want" >"$venv/stamp-$want"
