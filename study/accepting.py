@@ -72,8 +72,7 @@ def said(value: object) -> str:
         case str():
             return quoted(value if len(value) <= 60 else value[:57] + "...")
         case int() | float():
-            text = str(value) if isinstance(value, float) or abs(value) < 10**30 else "a very large number"
-            return text
+            return str(value) if isinstance(value, float) or abs(value) < 10**30 else "a very large number"
         case list() | tuple():
             inside = ", ".join(said(item) for item in value[:4])
             return f"[{inside}{', ...' if len(value) > 4 else ''}]"

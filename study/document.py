@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import os
-import re
 import tomllib
 from collections.abc import Mapping
 from dataclasses import dataclass, field
@@ -12,9 +11,10 @@ from typing import Any, Final, Literal, cast
 
 from estimation.choices import Choices
 from study.accepting import Refused, accept
-from study.errors import BAD_STUDY, StudyError
-from study.literal import clean, nearest, quoted
-from study.options import AREA_SIDES, BY_NAME, OPTIONS, SECTIONS, Option
+from study.errors import StudyError
+from study.literal import clean, quoted
+from study.options import AREA_SIDES, BY_NAME, OPTIONS, SECTIONS
+from study.refusals import hint_for_missing, not_allowed, not_toml, refusal, unknown
 from study.saving import write_whole
 
 _LARGEST: Final = (
@@ -149,7 +149,7 @@ def load_study(path: Path | str) -> Study:
             raise StudyError(f"{shown}: is not a regular file.", "Name a study file on this machine.")
         content = path.read_bytes() if path.stat().st_size <= _LARGEST else None
     except FileNotFoundError:
-        raise StudyError(f"{shown}: there is no such study file.", _hint_for_missing(path)) from None
+        raise StudyError(f"{shown}: there is no such study file.", hint_for_missing(path)) from None
     except (OSError, ValueError) as error:
         reason = (getattr(error, "strerror", None) or "the name is not valid").lower()
         raise StudyError(
@@ -181,9 +181,9 @@ def parse_study(text: str, path: Path | str) -> Study:
     try:
         document = tomllib.loads(text)
     except tomllib.TOMLDecodeError as error:
-        raise _not_toml(path, text, str(error)) from None
+        raise not_toml(path, text, str(error)) from None
     except RecursionError:
-        raise _refusal(
+        raise refusal(
             path, "is not valid TOML (nested too deeply).", "Write each key on its own line."
         ) from None
     return _build(path, _flatten(document, path), text)
@@ -195,7 +195,7 @@ def new_study(data_path: Path | str, path: Path | str) -> Study:
     The data file's path is kept relative where it lies in the study's folder or below, absolute elsewhere.
     """
     data_path, path = Path(data_path), Path(path)
-    absolute, folder = Path(os.path.abspath(data_path)), Path(os.path.abspath(path)).parent
+    absolute, folder = data_path.absolute(), path.absolute().parent
     kept = absolute.relative_to(folder) if absolute.is_relative_to(folder) else absolute
     return edit(Study(path=path), {"data.path": kept.as_posix(), "study.title": data_path.stem})
 
@@ -222,7 +222,7 @@ def edit(study: Study, changes: Mapping[str, object]) -> Study:
             sites.pop(site, None)
             values["assignment.sites"] = sites if value is None else {**sites, site: value}
         elif name not in BY_NAME:
-            raise _unknown(study.path, name)
+            raise unknown(study.path, name)
         else:
             values[name] = BY_NAME[name].default if value is None else value
     given = {name: value for name, value in values.items() if value != BY_NAME[name].default}
@@ -246,7 +246,7 @@ def save_study(study: Study) -> None:
     except (OSError, UnicodeDecodeError):
         on_disk = None
     if on_disk is not None and on_disk != expected:
-        raise _refusal(
+        raise refusal(
             study.path,
             "was changed by another program since it was opened here.",
             "Open it again to take that change in; nothing was written over it.",
@@ -299,12 +299,12 @@ def _flatten(document: Mapping[str, Any], path: Path, prefix: str = "") -> dict[
         name = f"{prefix}{key}"
         if name in SECTIONS:
             if not isinstance(value, dict):
-                raise _refusal(path, f"{name} is not a section.", f"Write it as a table, [{name}].")
+                raise refusal(path, f"{name} is not a section.", f"Write it as a table, [{name}].")
             values.update(_flatten(value, path, f"{name}."))
         elif name in BY_NAME:
             values[name] = value
         else:
-            raise _unknown(path, name)
+            raise unknown(path, name)
     return values
 
 
@@ -315,10 +315,10 @@ def _build(path: Path, given: Mapping[str, object], text: str) -> Study:
         try:
             sections[option.section][option.key] = accept(option, value)
         except Refused as refused:
-            raise _not_allowed(path, option, refused) from None
+            raise not_allowed(path, option, refused) from None
     area, frontier = sections.pop("assignment.area"), sections.pop("assignment.frontier")
     if len(frontier) > 1:
-        raise _refusal(path, "assignment.frontier has both all and any.", "Keep one of the two.")
+        raise refusal(path, "assignment.frontier has both all and any.", "Keep one of the two.")
     study = Study(
         path=path,
         text=text,
@@ -341,7 +341,7 @@ def _refuse_contradictions(study: Study) -> None:
     """Keys that are each allowed but not together, whatever else is still missing."""
     rule, treated, chosen = study.assignment.rule, study.assignment.treated, study.estimate
     if rule in ("cutoff", "cutoffs", "steps") and treated in AREA_SIDES:
-        raise _refusal(
+        raise refusal(
             study.path,
             f"assignment.treated is {quoted(treated)}, which belongs to a boundary, but assignment.rule is {quoted(rule)}.",
             'Choose "at or above", "above", "at or below" or "below".',
@@ -349,68 +349,14 @@ def _refuse_contradictions(study: Study) -> None:
     if chosen.order == 0:
         for key, value in (("interval", chosen.interval), ("bandwidth", chosen.bandwidth)):
             if value == "bias-aware":
-                raise _refusal(
+                raise refusal(
                     study.path,
                     f'estimate.{key} is "bias-aware", which a comparison of means (estimate.order = 0) does not have.',
                     f"Set estimate.order to 1 or more, or choose another {key}.",
                 )
     if chosen.variance == "spatial" and rule != "boundary":
-        raise _refusal(
+        raise refusal(
             study.path,
             f'estimate.variance is "spatial", which belongs to a boundary, but assignment.rule is {quoted(rule)}.',
             'Choose "neighbour", "hc0", "hc1", "hc2" or "hc3".',
         )
-
-
-def _refusal(path: Path, what: str, do: str) -> StudyError:
-    return StudyError(f"{clean(path.name)}: {what}", do, BAD_STUDY)
-
-
-def _not_allowed(path: Path, option: Option, refused: Refused) -> StudyError:
-    hint = f" Did you mean {quoted(refused.nearest)}?" if refused.nearest else ""
-    return _refusal(
-        path, f"{option.name} is {refused.found}, which is not allowed.", f"Allowed: {option.expected}.{hint}"
-    )
-
-
-def _unknown(path: Path, name: str) -> StudyError:
-    section, _, key = name.rpartition(".")
-    siblings = [option.key for option in OPTIONS if option.section == section]
-    elsewhere = [option for option in OPTIONS if option.key == key]
-    if not section or not siblings:
-        near = nearest(name, SECTIONS)
-        if elsewhere:
-            do = f"Move it under [{elsewhere[0].section}]."
-        elif near:
-            do = f"Did you mean [{near}]?"
-        else:
-            do = f"The sections are {', '.join(SECTIONS)}."
-        return _refusal(path, f"{quoted(name)} is not a known section or key.", do)
-    near = nearest(key, siblings)
-    if elsewhere:
-        do = f"Move it under [{elsewhere[0].section}]."
-    elif near:
-        do = f"Did you mean {quoted(near)}?"
-    else:
-        do = f"The keys of [{section}] are {', '.join(siblings)}."
-    return _refusal(path, f"{quoted(key)} is not a known key of [{clean(section)}].", do)
-
-
-def _not_toml(path: Path, text: str, message: str) -> StudyError:
-    found = re.search(r"\(at line (\d+)", message)
-    line = int(found.group(1)) if found else text.count("\n") + 1
-    problem = clean(re.sub(r"\s*\(at [^)]*\)\s*$", "", message)).rstrip(".")
-    return _refusal(
-        path, f"line {line} is not valid TOML: {problem[:1].lower()}{problem[1:]}.", "Correct that line."
-    )
-
-
-def _hint_for_missing(path: Path) -> str:
-    try:
-        siblings = sorted(entry.name for entry in path.parent.iterdir() if entry.suffix == ".toml")
-    except OSError:
-        return "Check the folder's name; it could not be listed."
-    near = nearest(path.name, siblings)
-    if near:
-        return f"Did you mean {quoted(near)}?"
-    return "Check the name, or start one with cutbank and a data file."

@@ -113,7 +113,7 @@ def _differs(held: Any, value: object) -> bool:
         return not isinstance(plain, list) or list(plain) != list(value)
     if isinstance(value, Mapping):
         return True  # each name in it is looked at on its own
-    return type(plain) is bool and type(value) is not bool or plain != value
+    return (type(plain) is bool and type(value) is not bool) or plain != value
 
 
 def _drop_emptied(document: Any, sections: set[str]) -> None:

@@ -48,7 +48,7 @@ def fill_whole(path: Path, fill: Callable[[Path], None]) -> None:
         try:
             fill(temporary)
             _sync(temporary)
-            os.replace(temporary, target)
+            temporary.replace(target)
         except BaseException:
             temporary.unlink(missing_ok=True)
             raise
