@@ -8,6 +8,7 @@ from typing import Final, Literal
 
 import numpy as np
 
+from estimation.bandwidth import coefficient
 from estimation.choices import Choices
 from estimation.errors import CannotEstimate
 from estimation.inference import HonestInterval, breakdown_curvature, honest_interval
@@ -121,6 +122,8 @@ class Effect:
         Lumps in the score; take-up against the rule (None without take-up).
     lead
         The answer that leads, which is the chosen interval unless the data forbid it.
+    slopes
+        Of the local fits at the line, below and above, in outcome per unit of score; None for order 0.
     binary
         Whether the outcome is nought or one, so that effects read in percentage points.
     """
@@ -142,6 +145,7 @@ class Effect:
     mass_points: MassPoints
     against_rule: AgainstRule | None
     lead: Leading
+    slopes: tuple[float, float] | None
     binary: bool
     treated: str
     notes: tuple[Note, ...]
@@ -217,6 +221,7 @@ def estimate_effect(line: Line, bandwidths: Bandwidths, question: Question) -> E
         mass_points=points,
         against_rule=question.against_rule,
         lead=lead,
+        slopes=_slopes(line, bandwidths),
         binary=line.binary,
         treated=line.sample.treated,
         notes=tuple(notes),
@@ -250,6 +255,22 @@ def _adjusted(line: Line, bandwidths: Bandwidths) -> tuple[Reading | None, str |
         return line.reading(bandwidths, adjust=True), None
     except CannotEstimate as problem:
         return None, problem.sentence
+
+
+def _slopes(line: Line, bandwidths: Bandwidths) -> tuple[float, float] | None:
+    if line.choices.order == 0:
+        return None
+    below, above = (
+        coefficient(
+            side,
+            bandwidth=bandwidths.of(side.name)[0],
+            kernel=line.choices.kernel,
+            order=line.choices.order,
+            power=1,
+        )
+        for side in (line.ladder.below, line.ladder.above)
+    )
+    return float(below.value[0]), float(above.value[0])
 
 
 def _curvature_table(sharp: Reading, line: Line) -> tuple[CurvatureRow, ...]:

@@ -1,0 +1,147 @@
+"""The plain-language result of a run, as lines of text."""
+
+from __future__ import annotations
+
+import textwrap
+
+import numpy as np
+
+from estimation.effect import Effect
+from study.analysis import Workbench
+from study.disagreement import disagreement
+from study.figures import effect_picture, table_lines
+from study.literal import clean
+from study.result import Result
+from study.wording import answers_table, effect_sentence, p_text, percent, plural, rule_sentence, share
+
+
+def result_lines(
+    result: Result, bench: Workbench | None = None, *, width: int = 80, plain: bool = False
+) -> list[str]:
+    """What a person reads: the question, the rows, then each effect with its three answers and what to mind.
+
+    Parameters
+    ----------
+    bench
+        Draws a picture of each effect where given.
+    width
+        Columns of the page.
+    plain
+        ASCII marks in pictures.
+    """
+    study = result.study
+    lines = [clean(study.title) or clean(study.path.name), ""]
+    lines += _wrapped(rule_sentence(study), width)
+    lines += _wrapped(_rows_sentence(result), width)
+    for effect in result.effects:
+        lines.append("")
+        lines += _wrapped(effect_sentence(effect, study), width)
+        lines.append("")
+        lines += _answers(effect, width)
+        if bench is not None and effect.kind != "site":
+            lines.append("")
+            lines += _picture(effect, bench, width, plain)
+        lines.append("")
+        for sentence in disagreement(effect):
+            lines += _wrapped(sentence, width)
+        lines += _take_up(effect, width)
+        for note in effect.notes:
+            lines += _wrapped(f"{'Caution: ' if note.severity == 'caution' else ''}{note.sentence}", width)
+    for failure in result.failures:
+        lines.append("")
+        lines += _wrapped(
+            f"{clean(failure.outcome)} ({clean(failure.where)}) could not be estimated: {failure.sentence} "
+            f"{failure.remedy}",
+            width,
+        )
+    if result.families:
+        lines += ["", *_families(result, width)]
+    lines.append("")
+    lines += _wrapped(
+        "The effect holds for units near the line. These numbers have not passed a disclosure review: the data "
+        "owner's rules decide what may leave.",
+        width,
+    )
+    return lines
+
+
+def _wrapped(sentence: str, width: int) -> list[str]:
+    return textwrap.wrap(sentence, width, break_long_words=False, break_on_hyphens=False)
+
+
+def _rows_sentence(result: Result) -> str:
+    assigned = result.assigned
+    used = int(np.sum(assigned.reason == 0))
+    dropped = ", ".join(f"{count:,} {reason}" for reason, count in assigned.dropped.items() if count)
+    said = f"{plural(assigned.rows_read, 'row')} read, {used:,} on one side of the line or the other"
+    said += f" ({dropped})." if dropped else "."
+    for name, column in assigned.outcomes.items():
+        missing = int(np.isnan(column[assigned.reason == 0]).sum())
+        if missing:
+            said += f" {clean(name)} is missing in {missing:,} of them."
+    return said
+
+
+def _answers(effect: Effect, width: int) -> list[str]:
+    rows = answers_table(effect)
+    head = ("", "estimate", f"{percent(effect.choices.level)} from", "to", "rests on")
+    body = [
+        (
+            ("› " if row.leads else "  ") + row.name,
+            row.estimate or "–",
+            row.low or "–",
+            row.high or "–",
+            row.basis if row.reason is None else "no answer, see below",
+        )
+        for row in rows
+    ]
+    lines = table_lines([head, *body], right=(1, 2, 3), indent=0)
+    # A page of 80 columns has no room for the last column's longest words: they go on under their own heading.
+    fitted: list[str] = []
+    start = lines[0].index("rests on")
+    for line in lines:
+        pieces = textwrap.wrap(line[start:], max(width - start, 20)) or [""]
+        fitted.append((line[:start] + pieces[0]).rstrip())
+        fitted += [" " * start + piece for piece in pieces[1:]]
+    for row in rows:
+        if row.reason is not None:
+            fitted += ["", *_wrapped(f"{row.name}: {row.reason}", width)]
+    return fitted
+
+
+def _picture(effect: Effect, bench: Workbench, width: int, plain: bool) -> list[str]:
+    reach = 1.5 * max(effect.bandwidths.below, effect.bandwidths.above)
+    bins = bench.bins(effect.outcome, min(reach, bench.widest(effect.outcome)), 16)
+    curve = bench.curve(effect.outcome, effect.bandwidths)
+    return effect_picture(bins, curve, cutoff=effect.cutoff or 0.0, width=min(width, 100), plain=plain)
+
+
+def _take_up(effect: Effect, width: int) -> list[str]:
+    take_up, against = effect.reading.take_up, effect.against_rule
+    if take_up is None:
+        return []
+    said = (
+        f"Take-up jumps by {share(take_up.jump)} ({percent(effect.choices.level)} interval {share(take_up.low)} to "
+        f"{share(take_up.high)}, F = {take_up.first_stage_f:.0f})."
+    )
+    if against is not None:
+        said += (
+            f" On the treated side {against.treated_without:,} of {against.treated_rows:,} did without; on the other "
+            f"{against.other_with:,} of {against.other_rows:,} took it."
+        )
+    return _wrapped(said, width)
+
+
+def _families(result: Result, width: int) -> list[str]:
+    rows = [("outcome", "where", "alone", "Holm", "Benjamini–Hochberg")]
+    rows += [
+        (clean(f.outcome), clean(f.where), p_text(f.p_value), p_text(f.holm), p_text(f.benjamini_hochberg))
+        for f in result.families
+    ]
+    return [
+        *_wrapped(
+            "Several outcomes were asked about; p-values of the robust answer, alone and held to the family:",
+            width,
+        ),
+        *table_lines(rows),
+    ]
