@@ -6,6 +6,7 @@ lies in. Cells hold meanings (`Ink`, `Paper`), not colours; `strips` asks the lo
 
 from __future__ import annotations
 
+import itertools
 from collections.abc import Iterable
 from typing import Final
 
@@ -24,7 +25,16 @@ Mask = npt.NDArray[np.bool_]
 _BLANK: Final = 0x20
 _BRAILLE: Final = 0x2800
 # Row, column and bit of each of the 4 x 2 dots of a braille cell.
-_DOT_BITS: Final = ((0, 0, 1), (1, 0, 2), (2, 0, 4), (0, 1, 8), (1, 1, 16), (2, 1, 32), (3, 0, 64), (3, 1, 128))
+_DOT_BITS: Final = (
+    (0, 0, 1),
+    (1, 0, 2),
+    (2, 0, 4),
+    (0, 1, 8),
+    (1, 1, 16),
+    (2, 1, 32),
+    (3, 0, 64),
+    (3, 1, 128),
+)
 
 ASCII_MARKS: Final = {
     "○": "o", "■": "#", "●": "*", "◆": "*", "◇": "o", "▲": "^", "△": "v", "▼": "v", "▸": ">",
@@ -69,7 +79,11 @@ class Canvas:
         """
         rows, columns = mask.shape[0] // 4, mask.shape[1] // 2
         bits = np.zeros((rows, columns), dtype=np.uint8)
-        for row, column, bit in _DOT_BITS:  # eight strided slices: a quarter of the time of a reduction over two axes
+        for (
+            row,
+            column,
+            bit,
+        ) in _DOT_BITS:  # eight strided slices: a quarter of the time of a reduction over two axes
             bits |= mask[row::4, column::2].view(np.uint8) * np.uint8(bit)
         hit = bits != 0
         code = _ASCII_CELLS[bits] if self.ascii_only else bits.astype(np.uint32) + _BRAILLE
@@ -138,7 +152,9 @@ class Canvas:
         row = np.fromiter(rows, dtype=np.intp)
         self.marks(np.full(row.shape, x, dtype=np.intp), row, mark, ink, only_blank=only_blank)
 
-    def horizontal(self, y: int, columns: Iterable[int], mark: str, ink: Ink, *, only_blank: bool = True) -> None:
+    def horizontal(
+        self, y: int, columns: Iterable[int], mark: str, ink: Ink, *, only_blank: bool = True
+    ) -> None:
         """Draw a row of marks."""
         column = np.fromiter(columns, dtype=np.intp)
         self.marks(column, np.full(column.shape, y, dtype=np.intp), mark, ink, only_blank=only_blank)
@@ -166,7 +182,7 @@ class Canvas:
             starts = [0, *(np.flatnonzero(cuts[y]) + 1).tolist(), self.width]
             row = key[y]
             segments = []
-            for start, end in zip(starts, starts[1:], strict=False):
+            for start, end in itertools.pairwise(starts):
                 packed = int(row[start])
                 style = styles.get(packed)
                 if style is None:
@@ -195,9 +211,10 @@ class Canvas:
     def _rows(self) -> list[str]:
         # One decoding for the whole grid: 3,000 separate chr() calls would cost more than all drawing.
         everything = self.glyph.tobytes().decode("utf-32-le")
-        return [everything[start : start + self.width] for start in range(0, self.height * self.width, self.width or 1)] or (
-            [""] * self.height
-        )
+        return [
+            everything[start : start + self.width]
+            for start in range(0, self.height * self.width, self.width or 1)
+        ] or ([""] * self.height)
 
     def _key(self) -> npt.NDArray[np.int64]:
         """Pack ink, paper and weight; a blank cell takes the ink to its left, so that it cuts no run."""

@@ -140,7 +140,10 @@ def detect_look(
     """
     colour = not environment.get("NO_COLOR") and environment.get("TERM", "") != "dumb"
     if theme is None:
-        many = "256" in environment.get("TERM", "") or environment.get("COLORTERM", "") in ("truecolor", "24bit")
+        many = "256" in environment.get("TERM", "") or environment.get("COLORTERM", "") in (
+            "truecolor",
+            "24bit",
+        )
         background = environment.get("COLORFGBG", "").rpartition(";")[2]
         light = background.isdigit() and (int(background) == 7 or int(background) >= 9)
         theme = TERMINAL if not many else LIGHT if light else DARK
@@ -203,10 +206,22 @@ def _theme(name: str, *, dark: bool, accent: str, muted: str, faint: str, cursor
 # The hexadecimal values are those of the palette numbers above.
 THEMES: tuple[Theme, ...] = (
     _theme(
-        DARK, dark=True, accent="#5fafff", muted="#949494", faint="#585858", cursor="#444444", warning="#ffaf5f"
+        DARK,
+        dark=True,
+        accent="#5fafff",
+        muted="#949494",
+        faint="#585858",
+        cursor="#444444",
+        warning="#ffaf5f",
     ),
     _theme(
-        LIGHT, dark=False, accent="#005faf", muted="#6c6c6c", faint="#b2b2b2", cursor="#d0d0d0", warning="#af5f00"
+        LIGHT,
+        dark=False,
+        accent="#005faf",
+        muted="#6c6c6c",
+        faint="#b2b2b2",
+        cursor="#d0d0d0",
+        warning="#af5f00",
     ),
     _theme(
         TERMINAL,

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import itertools
 import math
 from collections.abc import Sequence
 from dataclasses import dataclass
@@ -9,7 +10,7 @@ from dataclasses import dataclass
 import numpy as np
 import numpy.typing as npt
 
-from tui.canvas import Canvas, Mask
+from tui.canvas import Canvas
 from tui.look import Ink, Paper
 
 Vector = npt.NDArray[np.float64]
@@ -44,7 +45,7 @@ class Scale:
         """Return the value at a share of the length."""
         if not self.log:
             return self.low + share * (self.high - self.low)
-        return self.low * (self.high / self.low) ** share
+        return float(self.low * (self.high / self.low) ** share)
 
     def ticks(self, most: int) -> list[float]:
         """Return at most about `most` round values inside the interval, ascending."""
@@ -94,7 +95,7 @@ def tick_labels(ticks: Sequence[float]) -> list[str]:
     if not ticks:
         return []
     largest = max(abs(tick) for tick in ticks)
-    gaps = [after - before for before, after in zip(ticks, ticks[1:], strict=False)]
+    gaps = [after - before for before, after in itertools.pairwise(ticks)]
     finest = min(gaps) if gaps else (largest or 1.0)
     if largest >= 1e7 or (largest > 0 and finest < 1e-5):
         return [f"{tick:.4g}" for tick in ticks]
@@ -146,7 +147,9 @@ def padded(low: float, high: float, share: float = 0.06) -> tuple[float, float]:
 class PlotArea:
     """A block of `width` x `height` cells of a canvas with an x and a y scale."""
 
-    def __init__(self, canvas: Canvas, *, left: int, top: int, width: int, height: int, x: Scale, y: Scale) -> None:
+    def __init__(
+        self, canvas: Canvas, *, left: int, top: int, width: int, height: int, x: Scale, y: Scale
+    ) -> None:
         self.canvas = canvas
         self.left, self.top, self.width, self.height = left, top, width, height
         self.x, self.y = x, y
@@ -246,7 +249,9 @@ class PlotArea:
             if row >= 0:
                 self.canvas.text(self.left - 1 - len(words), row, words, ink)
 
-    def x_axis(self, *, heavy: tuple[float, float] | None = None, labels_shift: float = 0.0, name: str = "") -> None:
+    def x_axis(
+        self, *, heavy: tuple[float, float] | None = None, labels_shift: float = 0.0, name: str = ""
+    ) -> None:
         """Draw the line under the area with its ticks, the labels under it, and the axis's name at the right end.
 
         Parameters
@@ -263,7 +268,9 @@ class PlotArea:
             name = name[: self.width // 3] + "…"
         places, words = self._x_ticks(labels_shift)
         columns = self.columns(places).tolist()
-        self.canvas.horizontal(row, range(self.left, self.left + self.width), "─", Ink.FAINT, only_blank=False)
+        self.canvas.horizontal(
+            row, range(self.left, self.left + self.width), "─", Ink.FAINT, only_blank=False
+        )
         self.canvas.marks(np.array(columns, dtype=np.intp), np.full(len(columns), row), "┬", Ink.FAINT)
         if heavy is not None:
             self._heavy(row, heavy, columns)

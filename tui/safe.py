@@ -125,7 +125,11 @@ class SafeApp(WireApp[Result]):
         error = sys.exc_info()[1]
         where = self._write_crash(error)
         said = f"Cutbank stopped because of a mistake in the program ({type(error).__name__}).\n"
-        said += f"What happened is in {where}; it holds no data.\n" if where else "Your study is saved as it was.\n"
+        said += (
+            f"What happened is in {where}; it holds no data.\n"
+            if where
+            else "Your study is saved as it was.\n"
+        )
         self._exit_renderables.append(RichText(said))
         self._close_messages_no_wait()
 

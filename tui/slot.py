@@ -100,7 +100,7 @@ class Slot(Generic[Request, Answer]):
 
         try:
             answer = await asyncio.to_thread(self._work, request, should_stop)
-        except Exception as error:  # whatever went wrong in the thread is told, not lost
+        except Exception as error:  # noqa: BLE001 - whatever went wrong in the thread is told, not lost
             if generation == self._generation:
                 self._failed(request, error)
             return

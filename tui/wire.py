@@ -36,7 +36,9 @@ TESTED_VERSIONS = ("8.2",)
 WORKS_HERE = textual.__version__.rpartition(".")[0] in TESTED_VERSIONS
 
 # Characters that take one cell everywhere and combine with nothing; other text is divided with care.
-_SIMPLE = re.compile("[ -~\u00a0-\u02ff\u2010-\u2027\u2030-\u205e\u2190-\u22ff\u2500-\u25fc\u2800-\u28ff\ufffd]*")
+_SIMPLE = re.compile(
+    "[ -~\u00a0-\u02ff\u2010-\u2027\u2030-\u205e\u2190-\u22ff\u2500-\u25fc\u2800-\u28ff\ufffd]*"
+)
 _CLEAR = "\x1b[m\x1b[2J"
 _QUERY = "\x1b[6n"
 _PATIENCE_S = 1.0
@@ -249,7 +251,7 @@ class WireApp(App[Result]):
         try:
             self._take(renderable)  # type: ignore[arg-type]
             self._send()
-        except Exception as error:  # as Textual does: a failure while painting is the app's failure
+        except Exception as error:  # noqa: BLE001 - as Textual does: a failure while painting is the app's failure
             self._handle_exception(error)
         finally:
             self.post_display_hook()

@@ -12,8 +12,8 @@ from textual.widget import Widget
 
 from tui.look import DARK, LIGHT, TERMINAL, Ink, Look
 from tui.safe import SafeApp, Words
-from tui.widgets.cells import shape
 from tui.widgets.answers import Answer, AnswerTable
+from tui.widgets.cells import shape
 from tui.widgets.chart import EffectChart
 from tui.widgets.form import Choice, ChoiceForm
 from tui.widgets.histogram import ScoreHistogram
@@ -113,7 +113,17 @@ def histogram(cutoff: float = 52.0) -> ScoreHistogram:
 def table() -> VTable:
     """A table of columns."""
     draw = np.random.default_rng(5)
-    names = ["heat_burden", "admissions", "district", "[bold]street[/]", "grant", "head_age", "rooms", "größe", "温度"]
+    names = [
+        "heat_burden",
+        "admissions",
+        "district",
+        "[bold]street[/]",
+        "grant",
+        "head_age",
+        "rooms",
+        "größe",
+        "温度",
+    ]
     kinds = ["number", "whole number", "text", "text", "yes/no"]
     rows = [
         (
@@ -179,7 +189,12 @@ GALLERY: dict[str, Callable[[], list[Widget]]] = {
     "histogram": lambda: [histogram()],
     "table": lambda: [table()],
     "answers": lambda: [answers(), form()],
-    "bench": lambda: [effect_chart(), sweep_chart(), Words("Being just above the line changed admissions."), answers()],
+    "bench": lambda: [
+        effect_chart(),
+        sweep_chart(),
+        Words("Being just above the line changed admissions."),
+        answers(),
+    ],
 }
 
 

@@ -48,7 +48,11 @@ class Terminal:
         self.screen = pyte.Screen(*size)
         self.screen.write_process_input = self._answer  # type: ignore[method-assign]
         self._stream = pyte.ByteStream(self.screen)
-        plain = {"TERM": "xterm-256color", "LANG": "C.UTF-8", "PYTHONPATH": f"{ROOT}:{ROOT / 'tests' / 'tui'}"}
+        plain = {
+            "TERM": "xterm-256color",
+            "LANG": "C.UTF-8",
+            "PYTHONPATH": f"{ROOT}:{ROOT / 'tests' / 'tui'}",
+        }
         kept = {key: os.environ[key] for key in ("PATH", "HOME") if key in os.environ}
         self._pid, self._fd = pty.fork()
         if self._pid == 0:  # the child: nothing of the test runs here
@@ -62,7 +66,9 @@ class Terminal:
     def __enter__(self) -> Terminal:
         return self
 
-    def __exit__(self, kind: type[BaseException] | None, error: BaseException | None, trace: TracebackType | None) -> None:
+    def __exit__(
+        self, kind: type[BaseException] | None, error: BaseException | None, trace: TracebackType | None
+    ) -> None:
         with contextlib.suppress(ProcessLookupError):
             os.kill(self._pid, signal.SIGKILL)
         os.waitpid(self._pid, 0)

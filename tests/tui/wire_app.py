@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import sys
+from typing import ClassVar
 
 from gallery import answers, at_width, effect_chart, show_width, sweep_chart, table
 from textual.app import ComposeResult
@@ -18,11 +19,13 @@ class WireTestApp(SafeApp[None]):
 
     ENABLE_COMMAND_PALETTE = False
     AUTO_FOCUS = None
-    BINDINGS = [
+    BINDINGS: ClassVar = [
         ("left", "width(-1)"), ("right", "width(1)"), ("s", "status"), ("r", "redraw"), ("x", "crash"), ("q", "quit"),
         ("t", "table"), ("n", "notice"),
     ]  # fmt: skip
-    CSS = "EffectChart { height: 2fr } SweepChart { height: 1fr } Words { height: 1 } VTable { display: none }"
+    CSS = (
+        "EffectChart { height: 2fr } SweepChart { height: 1fr } Words { height: 1 } VTable { display: none }"
+    )
 
     def compose(self) -> ComposeResult:
         """Compose."""
@@ -51,7 +54,9 @@ class WireTestApp(SafeApp[None]):
 
         def tick() -> None:
             self.ticks += 1
-            self.query_one("#status", Words).show(f"permutation {self.ticks * 250:,} of 20,000, about {40 - self.ticks} s left")
+            self.query_one("#status", Words).show(
+                f"permutation {self.ticks * 250:,} of 20,000, about {40 - self.ticks} s left"
+            )
 
         self.set_interval(0.5, tick)
 

@@ -6,6 +6,8 @@ import math
 from collections.abc import Sequence
 from dataclasses import dataclass
 
+import numpy as np
+
 from study.literal import clean
 from tui.canvas import Canvas, narrow
 from tui.look import Ink
@@ -78,7 +80,9 @@ class AnswerTable(PlotWidget):
 
     def draw(self, canvas: Canvas) -> None:
         """Draw the figures, then the intervals in the room that is left."""
-        figures = _figures(self._answers, decimals_for(self._answers) if self._digits is None else self._digits)
+        figures = _figures(
+            self._answers, decimals_for(self._answers) if self._digits is None else self._digits
+        )
         names = [narrow(clean(answer.name)) for answer in self._answers]
         at = [0, 2, 2 + max(map(len, names)) + 2]
         widths = [max(len(row[part]) for row in figures) for part in range(3)]
@@ -105,7 +109,12 @@ class AnswerTable(PlotWidget):
                 canvas.text(x, y, words, Ink.MUTED)
 
     def _draw_intervals(self, canvas: Canvas, left: int, width: int) -> None:
-        ends = [end for answer in self._answers for end in (answer.low, answer.high, answer.estimate) if _known(end)]
+        ends = [
+            end
+            for answer in self._answers
+            for end in (answer.low, answer.high, answer.estimate)
+            if _known(end)
+        ]
         if not ends:
             return
         low, high = padded(min(0.0, *map(float, ends)), max(0.0, *map(float, ends)), 0.04)  # type: ignore[arg-type]
@@ -113,13 +122,18 @@ class AnswerTable(PlotWidget):
         for y, answer in enumerate(self._answers):
             if not (_known(answer.low) and _known(answer.high)):
                 continue
-            area = PlotArea(canvas, left=left, top=y, width=width, height=1, x=scale, y=Scale(low=0.0, high=1.0))
-            first, last, middle = (int(c) for c in area.columns([answer.low, answer.high, answer.estimate or 0.0]))
+            area = PlotArea(
+                canvas, left=left, top=y, width=width, height=1, x=scale, y=Scale(low=0.0, high=1.0)
+            )
+            interval = np.array(
+                [answer.low, answer.high, answer.estimate], dtype=np.float64
+            )  # None becomes NaN
+            first, last, middle = (int(column) for column in area.columns(interval))
             ink = Ink.ACCENT if answer.chosen else Ink.TEXT
             canvas.horizontal(y, range(first, last + 1), "─", ink, only_blank=False)
             canvas.text(first, y, "├", ink)
             canvas.text(last, y, "┤", ink)
-            if _known(answer.estimate):
+            if middle >= 0:
                 canvas.text(middle, y, "●" if answer.chosen else "○", ink)
             area.vertical_rule(0.0)
 
@@ -133,7 +147,10 @@ def _figures(answers: Sequence[Answer], decimals: int) -> list[tuple[str, str, s
         return f"{number + 0.0:,.{decimals}f}" if number is not None and math.isfinite(number) else ""
 
     return [
-        (words(answer.estimate) or "none", *((words(answer.low), words(answer.high)) if _known(answer.low) else ("", "")))
+        (
+            words(answer.estimate) or "none",
+            *((words(answer.low), words(answer.high)) if _known(answer.low) else ("", "")),
+        )
         for answer in answers
     ]
 
@@ -143,7 +160,10 @@ def decimals_for(answers: Sequence[Answer]) -> int:
     lengths = [
         answer.high - answer.low
         for answer in answers
-        if answer.low is not None and answer.high is not None and _known(answer.low) and answer.high > answer.low
+        if answer.low is not None
+        and answer.high is not None
+        and _known(answer.low)
+        and answer.high > answer.low
     ]
     if not lengths or not math.isfinite(min(lengths)):
         return 2

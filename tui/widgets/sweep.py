@@ -103,7 +103,11 @@ class SweepChart(PlotWidget):
         widths = np.asarray(self._sweep.bandwidth, dtype=np.float64)
         y = even_scale(*_heights(self._sweep), canvas.height - 3)
         left = gutter(y, canvas.height - 3)
-        x = Scale(low=float(widths[0]), high=float(widths[-1]) if widths[-1] > widths[0] else 2 * float(widths[0]), log=True)
+        x = Scale(
+            low=float(widths[0]),
+            high=float(widths[-1]) if widths[-1] > widths[0] else 2 * float(widths[0]),
+            log=True,
+        )
         area = PlotArea(
             canvas, left=left, top=1, width=canvas.width - left, height=canvas.height - 3, x=x, y=y
         )
@@ -155,7 +159,9 @@ def _heights(sweep: EffectByWidth) -> tuple[float, float]:
 
     At the narrowest widths an interval can be a hundred times as long as elsewhere; it runs out of the picture.
     """
-    low, high, estimate = (np.asarray(part, dtype=np.float64) for part in (sweep.low, sweep.high, sweep.estimate))
+    low, high, estimate = (
+        np.asarray(part, dtype=np.float64) for part in (sweep.low, sweep.high, sweep.estimate)
+    )
     known = np.isfinite(low) & np.isfinite(high) & np.isfinite(estimate)
     if not known.any():
         numbers = estimate[np.isfinite(estimate)]

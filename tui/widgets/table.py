@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from dataclasses import dataclass
-from typing import ClassVar, Protocol
+from typing import ClassVar, Protocol, runtime_checkable
 
 from rich.segment import Segment
 from textual.binding import Binding, BindingType
@@ -14,6 +14,7 @@ from study.literal import clean
 from tui.look import Ink, Look, Paper
 from tui.widgets.cells import cell_width, fit, pad_decimal
 from tui.widgets.cursor_view import CursorView
+from tui.wire import look_of
 
 Cell = str | tuple[str, Ink]
 """What stands in a cell: words, or words and what they are drawn in."""
@@ -39,6 +40,7 @@ class Column:
     widest: int = 40
 
 
+@runtime_checkable
 class Rows(Protocol):
     """Where a table reads from."""
 
@@ -96,7 +98,7 @@ class VTable(CursorView):
     ) -> None:
         """Show these rows; the cursor keeps its place unless one is given."""
         self._columns = tuple(columns)
-        self._source = rows if not isinstance(rows, (list, tuple)) else ListedRows(rows)
+        self._source = rows if isinstance(rows, Rows) else ListedRows(rows)
         self._layout = [_Width(column) for column in self._columns]
         count = len(self._source)
         step = max(1, count // _LOOKED_AT)
@@ -127,7 +129,10 @@ class VTable(CursorView):
         """Scroll sideways."""
         most = max(0, self.content_columns() - self.size.width)
         self.scroll_to(
-            x=max(0, min(most, int(self.scroll_offset.x) + columns)), animate=False, immediate=True, force=True
+            x=max(0, min(most, int(self.scroll_offset.x) + columns)),
+            animate=False,
+            immediate=True,
+            force=True,
         )
 
     def _measure(self, index: int) -> bool:
@@ -165,15 +170,10 @@ class VTable(CursorView):
     def render_line(self, y: int) -> Strip:
         """Draw one line; an empty table says why it is empty."""
         if not self.row_count and y == 1 and self._empty:
-            look = self._look()
+            look = look_of(self)
             words = Segment("  " + clean(self._empty), look.style(Ink.MUTED))
             return self._strip([words], self.size.width, look.style(Ink.MUTED))
         return super().render_line(y)
-
-    def _look(self) -> Look:
-        from tui.wire import look_of  # the app's look, which tests without an app do not have
-
-        return look_of(self)
 
 
 class _Width:
