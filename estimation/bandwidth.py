@@ -271,11 +271,15 @@ def _largest_bend(coefficients: Matrix) -> Vector:
     return np.array(found)
 
 
-def shortest_honest_width(ladder: Ladder, *, order: int, curvature: float, level: float) -> float:
+def shortest_honest_width(
+    ladder: Ladder, spread: ScoreSpread, *, order: int, curvature: float, level: float
+) -> float:
     """The common bandwidth whose bias-aware interval is shortest, found on the ladder.
 
     Half the length, cv(bias/se)·se, falls and then rises as the width grows; a grid on a log scale finds the
-    valley, and finer grids inside it the place, to 1e-6 of itself.
+    valley, and finer grids inside it the place. The error is that of a constant noise on each side, learnt once
+    near the line: with an error estimated afresh at each width the search would settle where it happens to be
+    too small, and the interval would fall short of its level (Armstrong & Kolesár 2020, section 4).
     """
     if order == 0:
         raise CannotEstimate(
@@ -284,14 +288,17 @@ def shortest_honest_width(ladder: Ladder, *, order: int, curvature: float, level
             "Set estimate.order to 1 or choose another bandwidth rule.",
         )
     limits = _limits(ladder, order, ladder.kernel)
+    sides = (ladder.below, ladder.above)
+    first = limits.common(RULE_OF_THUMB[ladder.kernel] * spread.width * spread.rows**-0.2)
+    noise = [_noise_near(side, first) for side in sides]
     low, high = float(limits.low.max()), max(float(limits.high.max()), float(limits.low.max()) * (1 + 1e-9))
     best = high
     for count in (200, 40, 40, 40, 40):
         grid = np.geomspace(low, high, count)
-        fits = ladder.fits(Widths.common(grid), order=order)
-        error = np.sqrt(fits.covariance[:, 0, 0])
-        ratio = fits.unit_bias * curvature / np.where(error > 0.0, error, np.nan)
-        half = critical_values(ratio, level) * error
+        squares = [_squared_weights(side, grid, ladder.kernel, order) for side in sides]
+        error = np.sqrt(noise[0] * squares[0] + noise[1] * squares[1])
+        bias = ladder.fits(Widths.common(grid), order=order).unit_bias * curvature
+        half = critical_values(bias / np.where(error > 0.0, error, np.nan), level) * error
         usable = np.isfinite(half)
         if not usable.any():
             raise CannotEstimate(
@@ -300,6 +307,26 @@ def shortest_honest_width(ladder: Ladder, *, order: int, curvature: float, level
         i = int(np.argmin(np.where(usable, half, np.inf)))
         best, low, high = float(grid[i]), float(grid[max(i - 1, 0)]), float(grid[min(i + 1, count - 1)])
     return best
+
+
+def _noise_near(side: SideSums, bandwidth: float) -> float:
+    """Mean squared residual of the outcome within a bandwidth."""
+    h = np.array([bandwidth])
+    sums = side.raw(h, h, "uniform")[0, 0]
+    return float(sums[side.channels.spread.start] / sums[side.channels.squared_weight])
+
+
+def _squared_weights(side: SideSums, bandwidth: Vector, kernel: str, order: int) -> Vector:
+    """Σ l² of the level's weights at each width, shape (H,)."""
+    raw, shape = side.raw(bandwidth, bandwidth, kernel), kernel_coefficients(kernel)
+    moments = combine(raw, shape, 2 * order + 1)[:, :, 0]
+    unit = np.zeros((len(bandwidth), order + 1, 1), dtype=np.longdouble)
+    unit[:, 0] = 1.0
+    weights = solve(hankel(moments, order + 1), unit)[:, :, 0]
+    squares = combine(raw, np.convolve(shape, shape), 2 * order + 1)[:, :, side.channels.squared_weight]
+    return np.asarray(
+        np.einsum("hi,hij,hj->h", weights, hankel(squares, order + 1), weights), dtype=np.float64
+    )
 
 
 def choose_bandwidths(ladder: Ladder, spread: ScoreSpread, choices: Choices) -> Bandwidths:
@@ -317,7 +344,9 @@ def choose_bandwidths(ladder: Ladder, spread: ScoreSpread, choices: Choices) -> 
         bound = (
             rule_of_thumb_curvature(ladder)[0] if isinstance(choices.curvature, str) else choices.curvature
         )
-        width = shortest_honest_width(ladder, order=order, curvature=float(bound), level=choices.level)
+        width = shortest_honest_width(
+            ladder, spread, order=order, curvature=float(bound), level=choices.level
+        )
         return _with_pilot(width, width, rule, ladder, spread, choices)
     found = [mse_widths(ladder, spread, order=order, variable=v) for v in range(ladder.targets)]
     factor = coverage_factor(spread.rows, order) if rule.startswith("coverage") else 1.0
