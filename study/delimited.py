@@ -79,7 +79,7 @@ def unreadable(path: Path, separator: str, width: int) -> StudyError:
         for line, found in _widths(path, separator):
             if found != width:
                 return StudyError(
-                    f"{clean(path.name)}: line {line} has {found} values, but the header has {width}.",
+                    f"{clean(path.name)}: line {line} has {found} {'value' if found == 1 else 'values'}, but the header has {width}.",
                     "Correct that line, or the quotes in or before it.",
                     BAD_DATA,
                 )

@@ -108,7 +108,8 @@ def _type(values: Sequence[object], stored: str) -> str:
         return "TIME"
     if stored == "string":
         return "VARCHAR"
-    return "BIGINT" if stored.startswith("int") else "DOUBLE"
+    # A four-byte number keeps its type, so that 52.3 is not read as 52.29999924 and put below a cutoff of 52.3.
+    return "BIGINT" if stored.startswith("int") else "FLOAT" if stored == "float" else "DOUBLE"
 
 
 def _read(path: Path, **options: Any) -> tuple[Mapping[str, list[Any]], Any]:

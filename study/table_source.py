@@ -241,7 +241,7 @@ def _opened(
     elif ending in DELIMITED:
         wanted = [name for name in names if columns is None or name in columns or name in used]
         relation, types = _settled_types(connection, relation, types, wanted)
-    return OpenTable(
+    opened = OpenTable(
         path=source,
         connection=connection,
         relation=relation,
@@ -249,6 +249,35 @@ def _opened(
         types=types,
         condition=rows or "",
         contents=contents,
+    )
+    if rows:
+        _require_fit(opened)
+    return opened
+
+
+def _require_fit(opened: OpenTable) -> None:
+    """Refuse a condition that doesn't fit the columns' types or whose answer is not true or false."""
+    import duckdb  # deferred as above
+
+    try:
+        answer = opened.connection.execute(
+            f"DESCRIBE SELECT ({opened.condition}\n) AS kept FROM {opened.relation}"
+        ).fetchall()
+    except duckdb.Error:
+        raise _misfit() from None
+    if answer[0][1] != "BOOLEAN":
+        raise StudyError(
+            "data.rows: the condition is not true or false for a row.",
+            'Compare, such as "rooms > 0".',
+            BAD_STUDY,
+        )
+
+
+def _misfit() -> StudyError:
+    return StudyError(
+        "data.rows: the condition does not fit the values of the columns that it compares.",
+        "Compare numbers with numbers, and text with text in single quotes.",
+        BAD_STUDY,
     )
 
 
@@ -370,18 +399,8 @@ def _explained(error: duckdb.Error, source: Path) -> StudyError:
         return StudyError(
             f"{shown}: is not valid JSON near line {malformed.group(1)}.", "Correct it.", BAD_DATA
         )
-    if isinstance(error, duckdb.ConversionException):
-        return StudyError(
-            "data.rows: the condition compares values of different kinds.",
-            "Compare numbers with numbers and text with text in quotes.",
-            BAD_STUDY,
-        )
-    if isinstance(error, duckdb.BinderException):
-        return StudyError(
-            "data.rows: the condition does not fit the columns' types, or is not true or false.",
-            "Compare numbers with numbers and text with text in quotes.",
-            BAD_STUDY,
-        )
+    if isinstance(error, duckdb.ConversionException | duckdb.OutOfRangeException):
+        return _misfit()
     ending = source.suffix.lower()
     return StudyError(
         f"{shown}: is damaged, or not a {ending} file.",

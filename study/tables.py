@@ -215,6 +215,18 @@ def parts_of(opened: OpenTable, *, numbers: Mapping[str, str], labels: Sequence[
     )
 
 
+def as_number(opened: OpenTable, name: str) -> str:
+    """SQL for a column as an eight-byte number.
+
+    A four-byte number becomes the one that is written the same: its 52.3 is 52.3, not 52.29999924, which would lie below
+    a cutoff of 52.3.
+    """
+    column = identifier(name)
+    if opened.types[name] == "FLOAT":
+        column = f"CAST({column} AS VARCHAR)"
+    return f"CAST({column} AS DOUBLE)"
+
+
 def natural_key(text: str) -> tuple[tuple[int, int, str], ...]:
     """Sorts "site 2" before "site 10"."""
     pieces = re.findall(r"[0-9]+|[^0-9]+", text)
