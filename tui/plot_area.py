@@ -27,11 +27,14 @@ class Scale:
         Ends of the interval, low < high; both positive when `log`.
     log : bool
         Equal ratios take equal lengths.
+    step : float, optional
+        Distance of the ticks, when the scale was made for it.
     """
 
     low: float
     high: float
     log: bool = False
+    step: float | None = None
 
     def share(self, values: npt.ArrayLike) -> Vector:
         """Return how far along each value lies: 0 at `low`, 1 at `high`, NaN where it cannot be placed."""
@@ -49,6 +52,8 @@ class Scale:
 
     def ticks(self, most: int) -> list[float]:
         """Return at most about `most` round values inside the interval, ascending."""
+        if self.step is not None:
+            return _multiples(self.step, self.low, self.high)
         if self.log:
             found = _log_ticks(self.low, self.high, most)
             if len(found) >= min(3, most):
@@ -72,6 +77,10 @@ def nice_ticks(low: float, high: float, most: int) -> list[float]:
     step = nice_step((high - low) / max(1, most))
     if not math.isfinite(step) or step <= 0:
         return []
+    return _multiples(step, low, high)
+
+
+def _multiples(step: float, low: float, high: float) -> list[float]:
     first, last = math.ceil(low / step - 1e-9), math.floor(high / step + 1e-9)
     # Multiples of the step, not sums of it: 3 * 0.1 stays next to 0.3 however far out it lies.
     return [index * step for index in range(first, last + 1)]
@@ -123,17 +132,20 @@ def even_scale(low: float, high: float, rows: int, *, from_zero: bool = False) -
     low, high = (0.0, high if high > 0 else 1.0) if from_zero else padded(low, high, 0.0)
     span = high - low
     usable = max(1, rows) if from_zero else max(1, rows - 1)
-    worth = math.inf
-    for between in range(2, 6):
-        worth = min(worth, nice_step(between * span / usable) / between)
+    closest = max(2, round(rows / 7))
+    worth, step = math.inf, 1.0
+    for between in range(closest, closest + 4):
+        tick = nice_step(between * span / usable)
+        if tick / between < worth:
+            worth, step = tick / between, tick
     if from_zero:
-        return Scale(low=0.0, high=rows * worth)
+        return Scale(low=0.0, high=rows * worth, step=step)
     bottom = (math.floor((low + high - rows * worth) / 2 / worth + 0.5) + 0.5) * worth
     if bottom > low:
         bottom -= worth
     elif bottom + rows * worth < high:
         bottom += worth
-    return Scale(low=bottom, high=bottom + rows * worth)
+    return Scale(low=bottom, high=bottom + rows * worth, step=step)
 
 
 def padded(low: float, high: float, share: float = 0.06) -> tuple[float, float]:
@@ -214,8 +226,9 @@ class PlotArea:
         across, down = across[known], down[known]
         if across.size < 2:
             return np.empty(0, dtype=np.intp), np.empty(0)
-        first = max(0, math.ceil(across[0] - 0.5))
-        last = min(2 * self.width - 1, math.floor(across[-1] + 0.5))
+        # Rounded to the nearest dots, halves inwards.
+        first = max(0, math.ceil(across[0] - 0.5 + 1e-9))
+        last = min(2 * self.width - 1, math.floor(across[-1] + 0.5 - 1e-9))
         column = np.arange(first, last + 1, dtype=np.intp)
         # Clipped so that a curve far outside does not overflow when it is rounded.
         far = 4.0 * self.height

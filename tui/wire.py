@@ -17,7 +17,7 @@ from time import monotonic
 from typing import TYPE_CHECKING, Any, TypeVar
 
 import textual
-from rich.cells import split_graphemes
+from rich.cells import cell_len, split_graphemes
 from rich.color import ColorSystem
 from rich.style import Style
 from textual import events
@@ -54,7 +54,8 @@ class Picture:
 
     def __init__(self, width: int, height: int) -> None:
         self.width, self.height = width, height
-        self._codes: dict[Style, str] = {}
+        self._codes: dict[Style, tuple[str, str]] = {}
+        self._seen_on_blank = {"": ""}  # style code -> the part of it that shows on a blank
         self._wanted = [[" "] * width for _ in range(height)]
         self._wanted_style = [[""] * width for _ in range(height)]
         self._shown: list[list[str]] = []
@@ -77,6 +78,12 @@ class Picture:
         words, styles = self._expand(strip, system)
         words, styles = words[first - x : last - x], styles[first - x : last - x]
         end = first + len(words)
+        _mend(words)
+        row = self._wanted[y]
+        if row[first] == "" and first:  # half of a wide character is overwritten: the other half goes too
+            row[first - 1] = " "
+        if end < self.width and row[end] == "":
+            row[end] = " "
         self._wanted[y][first:end] = words
         self._wanted_style[y][first:end] = styles
         self._dirty.add(y)
@@ -87,10 +94,13 @@ class Picture:
         for text, style, control in strip:
             if control:
                 continue
-            code = "" if style is None else self._code(style, system)
+            code, blank = ("", "") if style is None else self._code(style, system)
             if _SIMPLE.fullmatch(text):
                 words.extend(text)
-                styles.extend([code] * len(text))
+                if blank == code or " " not in text:
+                    styles.extend([code] * len(text))
+                else:
+                    styles.extend([blank if character == " " else code for character in text])
                 continue
             for start, end, cells in split_graphemes(text)[0]:
                 if cells:
@@ -98,12 +108,18 @@ class Picture:
                     styles.extend([code] * cells)
         return words, styles
 
-    def _code(self, style: Style, system: ColorSystem) -> str:
-        code = self._codes.get(style)
-        if code is None:
+    def _code(self, style: Style, system: ColorSystem) -> tuple[str, str]:
+        """Return the codes of a style, and those of them that can be seen on a blank."""
+        found = self._codes.get(style)
+        if found is None:
             # Links are left out on purpose: no address from data reaches the terminal.
-            code = self._codes[style] = Strip.render_ansi(style, system)
-        return code
+            code = Strip.render_ansi(style, system)
+            shows_ink = style.reverse or style.underline or style.strike
+            blank = code if shows_ink else Strip.render_ansi(Style(bgcolor=style.bgcolor), system)
+            found = self._codes[style] = (code, blank)
+            self._seen_on_blank[code] = blank
+            self._seen_on_blank[blank] = blank
+        return found
 
     def frame(self) -> str:
         """Return what turns the shown screen into the wanted one, and take it as shown; "" when nothing changed."""
@@ -156,6 +172,9 @@ class Picture:
                 # Terminals disagree about the width of some characters; after one, say where we are.
                 out.append(f"\x1b[{y + 1};{x + 1}H")
                 jump = False
+            if word == " " and pen is not None and self._seen_on_blank[pen] == code:
+                out.append(word)  # any ink will do on a blank
+                continue
             if code != pen and word:
                 out.append(f"\x1b[0;{code}m" if code else "\x1b[m")
                 pen = code
@@ -164,6 +183,14 @@ class Picture:
         self._shown[y][first:last] = wanted[first:last]
         self._shown_style[y][first:last] = styles[first:last]
         return pen
+
+
+def _mend(words: list[str]) -> None:
+    """Replace the halves of wide characters that a cut has left at either end."""
+    if words and words[0] == "":
+        words[0] = " "
+    if words and not words[-1].isascii() and cell_len(words[-1]) > 1:
+        words[-1] = " "
 
 
 class Pace:

@@ -12,6 +12,7 @@ import asyncio
 import sys
 from pathlib import Path
 
+from golden import screen_strips
 from PIL import Image, ImageDraw, ImageFont
 from rich.cells import cell_len
 from rich.color import ColorType
@@ -27,11 +28,6 @@ _LIGHT = TerminalTheme(
     [(90, 90, 90), (255, 80, 80), (80, 200, 80), (220, 180, 0), (80, 80, 255), (255, 80, 255), (0, 180, 190), (255, 255, 255)],
 )  # fmt: skip
 _DARK = TerminalTheme((18, 18, 18), (208, 208, 208), DIMMED_MONOKAI.ansi_colors._colors[:8], None)
-
-
-def screen_strips(app: App[object]) -> list[Strip]:
-    """Return what the app shows, one strip a row (the compositor is private: only here and in `golden`)."""
-    return app.screen._compositor.render_strips(app.size)
 
 
 def _fonts() -> tuple[ImageFont.FreeTypeFont, ImageFont.FreeTypeFont]:
