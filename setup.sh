@@ -65,7 +65,7 @@ settle_existing() {
 }
 
 pip_install() {
-    "$venv/bin/python" -m pip install --quiet --disable-pip-version-check --no-input "$@" >>"$log" 2>&1
+    "$venv/bin/python" -m pip install --quiet --disable-pip-version-check --no-input --retries 2 "$@" >>"$log" 2>&1
 }
 
 case $want in run | dev) ;; *) refuse "setup.sh: 'run' or 'dev', not '$want'." ;; esac
@@ -74,7 +74,7 @@ if stands dev || { [ "$want" = run ] && stands run; }; then exit 0; fi
 settle_existing
 python=$(find_python) || exit 1
 say "Setting up (once, about a minute)..."
-if ! { mkdir -p "$venv" && : >"$unfinished" && : >"$ours"; } 2>/dev/null; then
+if ! { mkdir -p "$venv" && : >"$ours" && : >"$unfinished"; } 2>/dev/null; then
     say "Nothing can be written to $PWD/$venv."
     refuse "Check the folder's permissions and the free space, then run the same command again."
 fi
