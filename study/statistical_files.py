@@ -14,7 +14,6 @@ from study.literal import clean
 if TYPE_CHECKING:
     import duckdb
 
-ENDINGS: Final = (".dta", ".sav", ".zsav", ".sas7bdat")
 _CHUNK: Final = 250_000  # rows held as Python values at a time
 
 

@@ -2,9 +2,7 @@
 
 from __future__ import annotations
 
-import os
 import re
-import stat
 from collections.abc import Iterator, Mapping, Sequence
 from contextlib import contextmanager
 from dataclasses import dataclass
@@ -12,6 +10,7 @@ from pathlib import Path
 from typing import TYPE_CHECKING, Final
 
 from study import delimited, statistical_files
+from study.data_files import DATABASE, DELIMITED, JSON_LINES, PARQUET, STATISTICAL, check_file
 from study.errors import BAD_DATA, BAD_STUDY, StudyError
 from study.literal import clean, nearest, quoted
 from study.row_condition import check_condition
@@ -19,12 +18,6 @@ from study.row_condition import check_condition
 if TYPE_CHECKING:
     import duckdb
 
-DELIMITED: Final = (".csv", ".tsv", ".tab", ".txt")
-PARQUET: Final = (".parquet", ".pq")
-JSON_LINES: Final = (".jsonl", ".ndjson")
-DATABASE: Final = (".duckdb", ".db", ".ddb")
-ENDINGS: Final = DELIMITED + PARQUET + JSON_LINES + DATABASE + statistical_files.ENDINGS
-_LATER: Final = (".xlsx", ".gpkg", ".shp", ".geojson", ".fgb")
 _MISSING: Final = ("", "NA", ".")  # how spreadsheets and statistics packages write a missing value in CSV
 _LOADED: Final = "rows of the file"
 _ATTACHED: Final = "data file"
@@ -101,7 +94,7 @@ def open_table(
     """
     import duckdb  # the first screen paints without it
 
-    _check_file(source)
+    check_file(source)
     try:
         connection = _connect(source)
         try:
@@ -110,60 +103,6 @@ def open_table(
             connection.close()
     except duckdb.Error as error:
         raise _explained(error, source) from None
-
-
-def _check_file(source: Path) -> None:
-    shown = clean(source.name)
-    if re.match(r"[A-Za-z][A-Za-z0-9+.-]+:/", str(source)):
-        raise StudyError(
-            f"{clean(str(source))}: is an address, not a file on this machine.",
-            "Name a local file.",
-            BAD_DATA,
-        )
-    try:
-        status = source.stat()
-    except FileNotFoundError:
-        raise StudyError(
-            f"{clean(str(source))}: there is no such data file.", _near_file(source), BAD_DATA
-        ) from None
-    except (OSError, ValueError) as error:
-        reason = (getattr(error, "strerror", None) or "the name is not valid").lower()
-        raise StudyError(
-            f"{clean(str(source))}: can't be read ({reason}).",
-            "Check its name and its permissions.",
-            BAD_DATA,
-        ) from None
-    if stat.S_ISDIR(status.st_mode):
-        raise StudyError(f"{shown}: is a folder, not a data file.", "Name a file inside it.", BAD_DATA)
-    if not stat.S_ISREG(status.st_mode):
-        raise StudyError(f"{shown}: is not a regular file.", "Copy the data to a file.", BAD_DATA)
-    ending = source.suffix.lower()
-    if ending not in ENDINGS:
-        later = "in this version" if ending in _LATER else "by Cutbank"
-        raise StudyError(
-            f"{shown}: files ending in {quoted(ending)} are not read {later}."
-            if ending
-            else f"{shown}: the name has no ending that says what kind of file it is.",
-            f"Use one of {', '.join(ENDINGS)}.",
-            BAD_DATA,
-        )
-    if status.st_size == 0:
-        raise StudyError(f"{shown}: the file is empty.", "Name a file with a header and rows.", BAD_DATA)
-    if not os.access(source, os.R_OK):
-        raise StudyError(f"{shown}: may not be read.", "Ask for read permission on it.", BAD_DATA)
-
-
-def _near_file(source: Path) -> str:
-    try:
-        names = sorted(entry.name for entry in source.parent.iterdir() if entry.is_file())
-    except OSError:
-        return "Check the folder's name; it can't be listed."
-    near = nearest(source.name, [name for name in names if name.lower().endswith(ENDINGS)])
-    return (
-        f"Did you mean {quoted(near)}?"
-        if near
-        else "Check the name; paths in a study are relative to its file."
-    )
 
 
 def _connect(source: Path) -> duckdb.DuckDBPyConnection:
@@ -213,7 +152,7 @@ def _opened(
             BAD_STUDY,
         )
     contents, names, path = None, None, _text(_pattern(source))
-    if ending in statistical_files.ENDINGS:
+    if ending in STATISTICAL:
         contents = statistical_files.contents_of(source)
         names, relation = contents.names, identifier(_LOADED)
     elif ending in DELIMITED:

@@ -14,6 +14,7 @@ import numpy.typing as npt
 from estimation.arrays import Codes, Vector
 from study.column_kinds import NUMERIC, ColumnKind, kind_of
 from study.column_summary import ColumnInfo, TableDescription, describe_columns
+from study.data_files import kind_of_file
 from study.errors import BAD_DATA, BAD_STUDY, StudyError
 from study.literal import clean, nearest, quoted
 from study.table_source import OpenTable, identifier, open_table
@@ -27,6 +28,7 @@ __all__ = [
     "TableDescription",
     "count_rows",
     "describe_columns",
+    "kind_of_file",
     "natural_key",
     "open_table",
     "parts_of",

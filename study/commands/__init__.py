@@ -1,0 +1,1 @@
+"""The command line's rooms, one a command; each loads only when it is asked for."""
