@@ -22,6 +22,8 @@ from estimation.variance import mass_point_starts
 
 # Fewer distinct scores a side than this and neither local answer is reliable (WWC handbook; Kolesár & Rothe 2018).
 FEW_SCORES: Final = 4
+# Fewer distinct scores a side than this are worth a word: single values carry much of the fit (no source).
+LUMPY_SCORES: Final = 20
 # Fewer clusters than this and the clustered error is too small by an amount nobody knows (common practice).
 FEW_CLUSTERS: Final = 40
 
@@ -70,8 +72,10 @@ class MassPoints:
 
     @property
     def lumpy(self) -> bool:
-        """Whether the rows of a side share scores to the point that it shows: under half of them distinct."""
-        return self.below < 0.5 * self.rows_below or self.above < 0.5 * self.rows_above
+        """Whether a side's scores are so few that its fit leans on each: under `LUMPY_SCORES` distinct ones."""
+        return min(self.below, self.above) < LUMPY_SCORES and (
+            self.below < self.rows_below or self.above < self.rows_above
+        )
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

@@ -43,14 +43,14 @@ def _verdict(intervals: dict[str, tuple[float, float]]) -> str:
     apart = max(low for low, _ in intervals.values()) > min(high for _, high in intervals.values())
     if apart:
         return "The intervals do not all overlap: they can't all be right."
-    number = "two" if len(intervals) == 2 else "three"
+    every = "Both" if len(intervals) == 2 else "All three"
     if not holding:
         same = len({low > 0.0 for low, _ in intervals.values()}) == 1
         if same:
-            return f"All {number} intervals exclude zero, on the same side."
+            return f"{every} intervals exclude zero, on the same side."
         return "The intervals exclude zero on different sides."
     if not excluding:
-        return f"All {number} intervals hold zero."
+        return f"{every} intervals hold zero."
     verb = "does" if len(holding) == 1 else "do"
     excludes = "excludes" if len(excluding) == 1 else "exclude"
     sentence = f"{_listed(excluding)} {excludes} zero; {_listed(holding)} {verb} not."

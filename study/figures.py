@@ -4,8 +4,9 @@ from __future__ import annotations
 
 import threading
 from collections.abc import Sequence
+from dataclasses import replace
 
-from estimation.line import Bins, Curve
+from estimation.line import Bins, Curve, CurveSide
 
 _ONE_AT_A_TIME = threading.Lock()
 
@@ -45,6 +46,21 @@ def effect_picture(
         built = plotext.uncolorize(plotext.build())
         plotext.clear_figure()
     return [row.rstrip() for row in built.splitlines()]
+
+
+def in_percent(bins: Bins, curve: Curve) -> tuple[Bins, Curve]:
+    """The same picture with shares as percentages."""
+
+    def fit(side: CurveSide) -> CurveSide:
+        return replace(side, fit=100.0 * side.fit, low=100.0 * side.low, high=100.0 * side.high)
+
+    return (
+        Bins(
+            below=replace(bins.below, mean=100.0 * bins.below.mean),
+            above=replace(bins.above, mean=100.0 * bins.above.mean),
+        ),
+        Curve(below=fit(curve.below), above=fit(curve.above)),
+    )
 
 
 def table_lines(

@@ -9,7 +9,7 @@ import numpy as np
 from estimation.effect import Effect
 from study.analysis import Workbench
 from study.disagreement import disagreement
-from study.figures import effect_picture, table_lines
+from study.figures import effect_picture, in_percent, table_lines
 from study.literal import clean
 from study.result import Result
 from study.wording import answers_table, effect_sentence, p_text, percent, plural, rule_sentence, share
@@ -42,11 +42,10 @@ def result_lines(
             lines.append("")
             lines += _picture(effect, bench, width, plain)
         lines.append("")
-        for sentence in disagreement(effect):
-            lines += _wrapped(sentence, width)
-        lines += _take_up(effect, width)
+        for sentence in (*disagreement(effect), *_take_up(effect)):
+            lines += _item(sentence, width)
         for note in effect.notes:
-            lines += _wrapped(f"{'Caution: ' if note.severity == 'caution' else ''}{note.sentence}", width)
+            lines += _item(f"{'Caution: ' if note.severity == 'caution' else ''}{note.sentence}", width)
     for failure in result.failures:
         lines.append("")
         lines += _wrapped(
@@ -67,6 +66,11 @@ def result_lines(
 
 def _wrapped(sentence: str, width: int) -> list[str]:
     return textwrap.wrap(sentence, width, break_long_words=False, break_on_hyphens=False)
+
+
+def _item(sentence: str, width: int) -> list[str]:
+    lines = _wrapped(sentence, width - 2)
+    return [f"{'·' if i == 0 else ' '} {line}" for i, line in enumerate(lines)]
 
 
 def _rows_sentence(result: Result) -> str:
@@ -113,10 +117,12 @@ def _picture(effect: Effect, bench: Workbench, width: int, plain: bool) -> list[
     reach = 1.5 * max(effect.bandwidths.below, effect.bandwidths.above)
     bins = bench.bins(effect.outcome, min(reach, bench.widest(effect.outcome)), 16)
     curve = bench.curve(effect.outcome, effect.bandwidths)
+    if effect.binary:
+        bins, curve = in_percent(bins, curve)
     return effect_picture(bins, curve, cutoff=effect.cutoff or 0.0, width=min(width, 100), plain=plain)
 
 
-def _take_up(effect: Effect, width: int) -> list[str]:
+def _take_up(effect: Effect) -> list[str]:
     take_up, against = effect.reading.take_up, effect.against_rule
     if take_up is None:
         return []
@@ -129,7 +135,7 @@ def _take_up(effect: Effect, width: int) -> list[str]:
             f" On the treated side {against.treated_without:,} of {against.treated_rows:,} did without; on the other "
             f"{against.other_with:,} of {against.other_rows:,} took it."
         )
-    return _wrapped(said, width)
+    return [said]
 
 
 def _families(result: Result, width: int) -> list[str]:

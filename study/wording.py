@@ -12,6 +12,7 @@ from study.document import Study
 from study.literal import clean
 
 MINUS = "\N{MINUS SIGN}"
+TIE = "\N{NO-BREAK SPACE}"  # holds a number and its unit on one line
 LEADS = {
     "robust": "robust interval",
     "bias-aware": "bias-aware interval",
@@ -86,13 +87,13 @@ def width_text(value: float) -> str:
 
 
 def percent(level: float) -> str:
-    """A confidence level such as "95 %"."""
-    return f"{100 * level:g} %"
+    """A confidence level as a percentage."""
+    return f"{100 * level:g}{TIE}%"
 
 
 def share(value: float) -> str:
     """A share of units as a percentage."""
-    return f"{100 * value:.1f} %"
+    return f"{100 * value:.1f}{TIE}%"
 
 
 def p_text(value: float) -> str:
@@ -212,7 +213,7 @@ def _levels(effect: Effect, scale: float) -> str:
     )
     sharp = reading.intention or reading
     spread = scale * sharp.std_error
-    unit = " %" if effect.binary else ""
+    unit = f"{TIE}%" if effect.binary else ""
     jump = ""
     if reading.intention is not None:
         jump = (
