@@ -1,0 +1,353 @@
+"""Screen 3, Effect: what the programme changed at the line, at a width that moves under the arrow keys."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Iterator
+from dataclasses import replace
+from typing import TYPE_CHECKING, ClassVar, cast
+
+from textual import events
+from textual.binding import BindingType
+from textual.containers import Vertical
+from textual.widget import Widget
+
+from study.readiness import missing_parts
+from tui.keys import bindings_of
+from tui.look import Ink
+from tui.screens.effect_keys import EffectKeys
+from tui.screens.effect_words import (
+    Standing,
+    all_text,
+    answers,
+    choices_line,
+    headline_lines,
+    sentence_lines,
+    why_lines,
+)
+from tui.screens.lines import Line, Lines, wrapped
+from tui.screens.widths import reach_for
+from tui.slot import Slot
+from tui.state import StudyEdited, WorkbenchReady
+
+if TYPE_CHECKING:
+    from study.analysis import Workbench
+    from tui.screens.effect_work import Asked, Found, Prepared
+    from tui.widgets.chart import EffectChart
+    from tui.widgets.sweep import SweepChart
+
+SIDE_BY_SIDE = 160
+
+
+class EffectScreen(EffectKeys):
+    """The live width."""
+
+    place = "effect"
+    BINDINGS: ClassVar[list[BindingType]] = [*bindings_of("effect")]
+    DEFAULT_CSS = """
+    EffectScreen #headline { margin-bottom: 1; }
+    EffectScreen.low #headline { margin-bottom: 0; }
+    EffectScreen #work { height: 1fr; layout: vertical; }
+    EffectScreen #pictures { height: 1fr; width: 1fr; }
+    EffectScreen #side { height: auto; width: 1fr; }
+    EffectScreen EffectChart { height: 3fr; min-height: 6; }
+    EffectScreen SweepChart { height: 2fr; min-height: 6; }
+    EffectScreen.low SweepChart { height: 6; }
+    EffectScreen #why { margin-top: 1; }
+    EffectScreen.low #why { display: none; }
+    EffectScreen.compact SweepChart { display: none; }
+    EffectScreen.tiny #pictures { display: none; }
+    EffectScreen.wide #work { layout: horizontal; }
+    EffectScreen.wide #side { width: 76; height: 1fr; padding: 0 0 0 4; }
+    EffectScreen.wide #choices { margin: 1 0; }
+    """
+
+    def __init__(self) -> None:
+        super().__init__(name="effect")
+        self.seen: list[Found] = []
+        self._problem = ""
+        self._prepare: Slot[Asked, Prepared] = Slot(
+            "prepare", _prepare, show=self._show_prepared, failed=self._failed
+        )
+        self._effect: Slot[Asked, Found] = Slot("effect", _find, show=self._show_found, failed=self._failed)
+        self.best_slot: Slot[Asked, float] = Slot(
+            "best width", _best, show=self.show_best, failed=self._failed
+        )
+
+    def body(self) -> Iterator[Widget]:
+        """The headline, the pictures (they come with numpy, after the first paint), and what stands beside them."""
+        yield Lines(id="headline")
+        with Vertical(id="work"):
+            yield Vertical(id="pictures")
+            with Vertical(id="side"):
+                yield Lines(id="choices")
+                yield Lines(id="why")
+
+    def on_mount(self) -> None:
+        """A screen that is opened after the data have come asks for its line now."""
+        super().on_mount()
+        if self.bench.workbench is not None:
+            self._ask_for_line(self.bench.workbench)
+
+    # ---- what is there ----------------------------------------------------------------------------------------
+
+    @property
+    def outcome(self) -> str:
+        """The outcome that is looked at."""
+        desk = self.bench.desk
+        if desk is None or not desk.study.columns.outcomes:
+            return ""
+        names = desk.study.columns.outcomes
+        return desk.view.outcome if desk.view.outcome in names else names[0]
+
+    def on_workbench_ready(self, message: WorkbenchReady) -> None:
+        """The data are there, or the study has changed: prepare the line again."""
+        self._ask_for_line(message.workbench)
+
+    def on_study_edited(self, message: StudyEdited) -> None:
+        """What stands on screen is another study's until the work is done."""
+        if message.study.estimate.bandwidth != message.before.estimate.bandwidth:
+            self._stand_at(None)
+
+    def look_at(self, outcome: str) -> None:
+        """Look at another outcome: its line is prepared, then shown."""
+        desk = self.bench.desk
+        assert desk is not None
+        desk.view = replace(desk.view, outcome=outcome)
+        self.bench.view_moved()
+        if self.bench.workbench is not None:
+            self._ask_for_line(self.bench.workbench)
+
+    def _ask_for_line(self, workbench: Workbench) -> None:
+        from tui.screens.effect_work import Asked
+
+        desk = self.bench.desk
+        if desk is None or not self.outcome:
+            return
+        self.width = desk.view.widths.get(self.outcome)
+        self._effect.forget()
+        self._prepare.supersede(Asked(workbench=workbench, outcome=self.outcome, width=self.width))
+        self._refresh_words()
+
+    def _show_prepared(self, asked: Asked, prepared: Prepared) -> None:
+        self._problem = ""
+        same = self.prepared is not None and self.prepared.outcome == prepared.outcome
+        self.prepared = prepared
+        self.reach = self.reach if same else None
+        self.standing = Standing(
+            effect=prepared.effect,
+            own=asked.width is None,
+            own_width=max(prepared.own.below, prepared.own.above),
+            pending=False,
+        )
+        self._remember(prepared.found)
+        self.call_later(self._mount_and_show)
+
+    async def _mount_and_show(self) -> None:
+        from tui.widgets.answers import AnswerTable
+        from tui.widgets.chart import EffectChart
+        from tui.widgets.sweep import SweepChart
+
+        if not self.query(EffectChart):
+            await self.query_one("#pictures").mount(EffectChart(id="chart"), SweepChart(id="sweep"))
+            await self.query_one("#side").mount(AnswerTable(id="answers"), before="#choices")
+        self.refresh_view()
+        self.refresh_keys()
+        self._draw_sweep()
+
+    def _failed(self, asked: Asked, error: Exception) -> None:
+        """A width or a study that gives no estimate says why; anything else is the program's fault and is recorded."""
+        if hasattr(error, "sentence") and hasattr(error, "remedy"):
+            self._problem = f"{error.sentence} {error.remedy}"
+        elif hasattr(error, "what") and hasattr(error, "do"):
+            self._problem = f"{error.what} {error.do}"
+        else:
+            self.bench.record_failure("estimating", error)
+            self._problem = (
+                "The effect could not be estimated because of a fault of the program; it is recorded."
+            )
+        self.standing = None
+        self.refresh_view()
+        self.refresh_keys()
+
+    # ---- drawing ----------------------------------------------------------------------------------------------
+
+    def on_resize(self, event: events.Resize) -> None:
+        """Choose the layout for the size."""
+        width, height = event.size
+        self.set_class(height < 30, "low")
+        self.set_class(height < 22 or width < 50, "compact")
+        self.set_class(height < 14 or width < 40, "tiny")
+        self.set_class(width >= SIDE_BY_SIDE, "wide")
+        super().on_resize(event)
+
+    def refresh_view(self) -> None:
+        """Bring words and pictures to where we stand."""
+        self._refresh_words()
+        self._draw_chart()
+        self._draw_here()
+
+    def _refresh_words(self) -> None:
+        width = self.size.width - 2
+        if width <= 0 or not self.is_mounted:
+            return
+        desk, standing = self.bench.desk, self.standing
+        shown = standing is not None and desk is not None
+        self.query_one("#work").display = shown or self.prepared is not None
+        headline = self.query_one("#headline", Lines)
+        if not shown or standing is None or desk is None:
+            headline.show([[(line, Ink.MUTED)] for line in wrapped(self._why_nothing(), width)])
+            self._say_nothing()
+            return
+        headline.show(headline_lines(standing, width))
+        side = 72 if self.has_class("wide") else width
+        self.query_one("#choices", Lines).show([choices_line(desk.study)])
+        for table in self.query("#answers"):
+            table.set_answers(answers(standing.effect))  # type: ignore[attr-defined]
+        room = 30 if self.has_class("wide") else 4 if self.size.height >= 34 else 0
+        why: list[Line] = []
+        if self.has_class("wide"):
+            why = [*([line] for line in sentence_lines(standing, desk.study, side)), [""]]
+        self.query_one("#why", Lines).show(why + why_lines(standing, side, room))
+        if self.on_words is not None:
+            self.on_words()
+
+    def _say_nothing(self) -> None:
+        for picture in self.query("#chart, #sweep"):
+            picture.say("")  # type: ignore[attr-defined]
+        for table in self.query("#answers"):
+            table.set_answers([])  # type: ignore[attr-defined]
+        self.query_one("#why", Lines).show([])
+        self.query_one("#choices", Lines).show([])
+
+    def _why_nothing(self) -> str:
+        desk = self.bench.desk
+        if desk is None:
+            return "No study is open: 1 goes to Data, where f opens one."
+        missing = missing_parts(desk.study)
+        if missing:
+            return f"Nothing to estimate yet: {missing[0]} 1 gives columns their roles, 2 sets the cutoff."
+        if self.bench.trouble is not None and self.bench.trouble[0]:
+            return " ".join(self.bench.trouble)
+        if self._problem:
+            return self._problem
+        return f"Reading {self.bench.data_name()} ..."
+
+    def _draw_chart(self) -> None:
+        standing, prepared = self.standing, self.prepared
+        if standing is None or prepared is None or not self.query("#chart"):
+            return
+        from tui.screens.effect_work import draw_chart
+
+        at = standing.effect.bandwidths
+        self.reach = reach_for(max(at.below, at.above), prepared.widest, self.reach)
+        desk = self.bench.desk
+        score = (desk.study.columns.score or "score") if desk is not None else "score"
+        draw_chart(self._chart(), prepared, at, reach=self.reach, score=score)
+
+    def _draw_here(self) -> None:
+        standing = self.standing
+        if standing is None or not self.query("#sweep"):
+            return
+        from tui.screens.effect_work import draw_here
+
+        draw_here(self._sweep(), standing.effect)
+
+    def _draw_sweep(self) -> None:
+        if self.prepared is not None and self.query("#sweep"):
+            from tui.screens.effect_work import draw_sweep
+
+            draw_sweep(self._sweep(), self.prepared)
+            self._draw_here()
+
+    def _chart(self) -> EffectChart:
+        return cast("EffectChart", self.query_one("#chart"))
+
+    def _sweep(self) -> SweepChart:
+        return cast("SweepChart", self.query_one("#sweep"))
+
+    # ---- the width --------------------------------------------------------------------------------------------
+
+    def stand(self, width: float | None) -> None:
+        """Stand at a width, None for the study's own: words, fit and counts at once, the rest when the key rests."""
+        if width == self.width:
+            return
+        self._stand_at(width)
+        prepared = self.prepared
+        if prepared is None:
+            return
+        self.bench.view_moved()
+        self._read_now(prepared)
+        from tui.screens.effect_work import Asked
+
+        self._effect.ask(Asked(workbench=prepared.workbench, outcome=prepared.outcome, width=width))
+        self.refresh_keys()
+
+    def _stand_at(self, width: float | None) -> None:
+        self.width = width
+        desk = self.bench.desk
+        if desk is not None and self.outcome:
+            desk.view = desk.view.at_width(self.outcome, width)
+
+    def _read_now(self, prepared: Prepared) -> None:
+        """The cheap part, in the key handler: under a millisecond whatever the rows, where sums are kept."""
+        if not prepared.at_once:
+            return
+        from estimation.errors import CannotEstimate
+
+        try:
+            effect = prepared.reading_at(self.width)
+        except CannotEstimate as problem:
+            self.tell(f"{problem.sentence} {problem.remedy}", warning=True)
+            return
+        own = max(prepared.own.below, prepared.own.above)
+        self.standing = Standing(effect=effect, own=self.width is None, own_width=own, pending=True)
+        self.refresh_view()
+
+    def _show_found(self, asked: Asked, found: Found) -> None:
+        prepared = self.prepared
+        if prepared is None or asked.workbench is not prepared.workbench or asked.width != self.width:
+            return  # an answer to an older question; the newer one is on its way
+        own = max(prepared.own.below, prepared.own.above)
+        self.standing = Standing(effect=found.effect, own=asked.width is None, own_width=own, pending=False)
+        self._problem = ""
+        self._remember(found)
+        self.refresh_view()
+
+    def _remember(self, found: Found) -> None:
+        if found not in self.seen:
+            self.seen.append(found)
+
+    # ---- plain text -------------------------------------------------------------------------------------------
+
+    def text(self) -> list[str]:
+        """Sentences first, then the pictures as they stand."""
+        desk, standing = self.bench.desk, self.standing
+        if desk is None or standing is None:
+            return [self._why_nothing()]
+        lines = all_text(standing, desk.study)
+        for picture in self.query("#chart, #sweep"):
+            lines += ["", *picture.to_text()]  # type: ignore[attr-defined]
+        return lines
+
+    def copied(self) -> list[str]:
+        """The sentences and the answers; no picture."""
+        desk, standing = self.bench.desk, self.standing
+        return [] if desk is None or standing is None else all_text(standing, desk.study)
+
+
+def _prepare(asked: Asked, should_stop: Callable[[], bool]) -> Prepared:
+    from tui.screens.effect_work import prepare
+
+    return prepare(asked, should_stop)
+
+
+def _find(asked: Asked, should_stop: Callable[[], bool]) -> Found:
+    from tui.screens.effect_work import find
+
+    return find(asked)
+
+
+def _best(asked: Asked, should_stop: Callable[[], bool]) -> float:
+    from tui.screens.effect_work import best_width
+
+    return best_width(asked)

@@ -1,0 +1,149 @@
+"""What the Effect screen says: the headline, the three answers, and what they rest on. The words are those of the headless run."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import TYPE_CHECKING
+
+from study.document import Study
+from tui.look import Ink
+from tui.screens.lines import Line, wrapped
+
+if TYPE_CHECKING:  # these bring numpy, which the first screen must not wait for
+    from estimation.effect import Effect
+    from study.wording import AnswerRow
+    from tui.widgets.answers import Answer
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class Standing:
+    """Where the person stands on the Effect screen.
+
+    Attributes
+    ----------
+    effect
+        The effect at this width, with the words' numbers.
+    own
+        Whether the width is the study's own.
+    own_width
+        The study's own width, the wider of the two sides.
+    pending
+        Whether the slow part (randomisation, notes) is still that of another width.
+    """
+
+    effect: Effect
+    own: bool
+    own_width: float
+    pending: bool
+
+
+def headline_lines(standing: Standing, width: int) -> list[Line]:
+    """The effect and its interval: two short lines that survive any terminal."""
+    from study.wording import effect_headline, width_text
+
+    effect = standing.effect
+    first, _, rest = effect_headline(effect).partition("  ")
+    reading, at = effect.reading, effect.bandwidths
+    low, high = effect.leading
+    clear = low > 0.0 or high < 0.0
+    verdict = "excludes zero" if clear else "holds zero"
+    near = (
+        width_text(at.below) if at.below == at.above else f"{width_text(at.below)} and {width_text(at.above)}"
+    )
+    rows = f"{reading.count_below:,} below, {reading.count_above:,} above within {near}"
+    lines: list[Line] = [[(first, Ink.ACCENT), (f"   {rest}, {verdict}", Ink.TEXT)]]
+    if len(first) + len(rest) + len(verdict) + 5 > width:
+        lines = [[(first, Ink.ACCENT)], *[[part] for part in wrapped(f"{rest}, {verdict}", width)]]
+    return [*lines, [(rows, Ink.TEXT), ("   " + _mark(standing), Ink.MUTED if standing.own else Ink.STRONG)]]
+
+
+def _mark(standing: Standing) -> str:
+    """Whether we stand where the study stands, in words."""
+    from study.wording import width_text
+
+    if standing.own:
+        rule = standing.effect.bandwidths.rule
+        return f"the study's own width ({'chosen' if rule == 'chosen' else rule})"
+    return f"the study's own is {width_text(standing.own_width)}: Enter keeps this one"
+
+
+def sentence_lines(standing: Standing, study: Study, width: int) -> list[str]:
+    """The effect in full, as the headless run says it."""
+    from study.wording import effect_sentence
+
+    return wrapped(effect_sentence(standing.effect, study), width)
+
+
+def answers(effect: Effect) -> list[Answer]:
+    """The answers, for the table that draws them."""
+    from study.wording import answers_table
+    from tui.widgets.answers import Answer
+
+    def drawn(row: AnswerRow) -> Answer:
+        estimate, low, high = row.numbers
+        return Answer(
+            name=row.name,
+            estimate=estimate,
+            low=low,
+            high=high,
+            note=row.reason or row.basis,
+            chosen=row.leads,
+        )
+
+    return [drawn(row) for row in answers_table(effect)]
+
+
+def why_lines(standing: Standing, width: int, most: int) -> list[Line]:
+    """What the answers' difference comes from and what there is to mind, in at most so many lines."""
+    from study.disagreement import disagreement
+
+    if most <= 0:
+        return []
+    effect = standing.effect
+    lines: list[Line] = []
+    for sentence in disagreement(effect):
+        lines += [[(part, Ink.TEXT)] for part in wrapped(sentence, width)]
+    for note in sorted(effect.notes, key=lambda note: note.severity != "caution"):
+        caution = note.severity == "caution"
+        words = f"Caution: {note.sentence}" if caution else note.sentence
+        lines += [[(part, Ink.WARNING if caution else Ink.MUTED)] for part in wrapped(words, width)]
+    if len(lines) > most:
+        lines = [*lines[: most - 1], [("v shows the rest", Ink.FAINT)]]
+    return lines
+
+
+def choices_line(study: Study) -> Line:
+    """The choices of the estimate in one line."""
+    chosen = study.estimate
+    parts = [f"{chosen.kernel} kernel", f"order {chosen.order}", f"{chosen.interval} interval leads"]
+    parts.append(f"variance {'clustered' if study.columns.cluster else chosen.variance}")
+    if chosen.donut:
+        parts.append(f"donut {chosen.donut:g}")
+    if study.columns.covariates:
+        parts.append("covariates on" if chosen.adjust else "covariates off")
+    return [(", ".join(parts), Ink.MUTED)]
+
+
+def all_text(standing: Standing, study: Study, width: int = 100) -> list[str]:
+    """Everything that the screen says, in whole sentences."""
+    from study.disagreement import disagreement
+    from study.wording import answers_table
+
+    effect = standing.effect
+    lines = [*sentence_lines(standing, study, width), ""]
+    rows = answers_table(effect)
+    names = max(len(row.name) for row in rows)
+    for row in rows:
+        if row.reason is not None:
+            lines += wrapped(f"{row.name.ljust(names)}  none: {row.reason}", width, indent=" " * (names + 2))
+        else:
+            lead = "leads; " if row.leads else ""
+            said = f"{row.name.ljust(names)}  {row.estimate} ({row.low} to {row.high}): {lead}{row.basis}"
+            lines += wrapped(said, width, indent=" " * (names + 2))
+    lines.append("")
+    for sentence in disagreement(effect):
+        lines += wrapped(sentence, width)
+    for note in effect.notes:
+        words = f"{'Caution: ' if note.severity == 'caution' else ''}{note.sentence} {note.remedy}".strip()
+        lines += wrapped(words, width)
+    return lines
