@@ -257,7 +257,8 @@ class PlotArea:
     def y_labels(self, ink: Ink = Ink.MUTED) -> None:
         """Write the ticks of y flush right against the area, so that their points stand under each other."""
         ticks = self.y.ticks(y_tick_count(self.height))
-        rows = self.rows(ticks)
+        # A tick on the wall between two rows labels the upper one, zero at the bottom like all others.
+        rows = self.rows(np.asarray(ticks) + 1e-6 * (self.y.high - self.y.low))
         for row, words in zip(rows.tolist(), tick_labels(ticks), strict=True):
             if row >= 0:
                 self.canvas.text(self.left - 1 - len(words), row, words, ink)

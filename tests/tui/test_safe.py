@@ -79,41 +79,40 @@ def every_widget(words: str) -> list[Widget]:
     ]
 
 
-WIDGETS = "Words Choices placeholder Entry table form answers effect sweep histogram sentence".split()
-
-
-class OneWidget(SafeApp[None]):
+class EveryWidget(SafeApp[None]):
     ENABLE_COMMAND_PALETTE = False
+    CSS = "Screen > * { height: 9 } Choices { border: none }"
 
-    def __init__(self, words: str, place: int) -> None:
+    def __init__(self, words: str) -> None:
         super().__init__(look=Look())
-        self._words, self._place = words, place
+        self._words = words
 
     def compose(self) -> ComposeResult:
-        widgets = every_widget(self._words)
-        assert len(widgets) == len(WIDGETS)
-        yield widgets[self._place]
+        yield from every_widget(self._words)
 
 
-@pytest.mark.parametrize("place", range(len(WIDGETS)), ids=WIDGETS)
-async def test_every_payload_is_harmless_in_every_widget(place: int) -> None:
-    for words in PAYLOADS.values():
-        app = OneWidget(words, place)
-        async with app.run_test(size=(100, 12)) as pilot:
-            await pilot.pause()
-            shown = [segment for strip in screen_strips(app) for segment in strip]
-            text = "".join(segment.text for segment in shown)
-            assert not STEERS & set(text)
-            assert not any(
-                segment.style and (segment.style.link or segment.style.meta.get("@click"))
-                for segment in shown
-            )
-            if words.startswith("["):
-                assert words in text, "markup is shown as it is"
+@pytest.mark.parametrize("payload", PAYLOADS)
+async def test_every_payload_is_harmless_in_every_widget(payload: str) -> None:
+    words = PAYLOADS[payload]
+    app = EveryWidget(words)
+    async with app.run_test(size=(100, 120)) as pilot:
+        await pilot.pause()
+        strips = screen_strips(app)
+        shown = [segment for strip in strips for segment in strip]
+        assert not STEERS & set("".join(segment.text for segment in shown))
+        assert all(segment.style is not None for segment in shown)
+        assert not any(
+            segment.style.link or segment.style.meta.get("@click") for segment in shown if segment.style
+        )
+        if words.startswith("["):
+            for widget in app.screen.children:
+                rows = range(widget.region.y, widget.region.bottom)
+                text = "".join(strips[y].text for y in rows)
+                assert words in text, f"markup is shown as it is in {widget}"
 
 
 async def test_a_notice_is_literal() -> None:
-    app = OneWidget("x", 0)
+    app = EveryWidget("x")
     async with app.run_test(size=(100, 12), notifications=True) as pilot:
         app.notify("a[/b] [@click=app.bell]z[/] \x1b[2J", title="[red]t[/]")
         await pilot.pause()

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import itertools
 from types import SimpleNamespace
 from typing import Any
 
@@ -418,6 +419,15 @@ def test_columns_are_as_high_as_their_counts() -> None:
     assert heights[3] == pytest.approx(4 * heights[1], abs=3)
 
 
+@pytest.mark.parametrize("height", [12, 20, 24, 33, 40])
+def test_labels_of_counts_have_one_rhythm(height: int) -> None:
+    lines = a_histogram([0, 5, 10, 23]).picture(60, height).to_text()
+    labels = [(row, int(line[:3])) for row, line in enumerate(lines[:-2]) if line[:3].strip().isdigit()]
+    assert len(labels) >= 2
+    assert len({before[0] - after[0] for before, after in itertools.pairwise(labels)}) == 1
+    assert labels[-1] == (height - 3, 0)
+
+
 def test_a_single_unit_is_seen() -> None:
     assert "▁" in "".join(a_histogram([1, 0, 100_000]).picture(60, 12).to_text())
 
@@ -428,6 +438,17 @@ def test_counts_stand_on_their_sides() -> None:
     assert lines[1].index("3 below") < line < lines[1].index("7 above, treated")
     narrow = a_histogram([5] * 10, cutoff=0.2).picture(81, 14).to_text()
     assert "3 below, 7 above, treated" in narrow[1]
+
+
+def test_a_heap_right_at_the_line_is_not_hidden_under_it() -> None:
+    """200 bins on 40 cells: the bin that begins at the line is a fifth of a cell wide and holds nearly everybody."""
+    counts = [1] * 200
+    counts[100] = 5000
+    canvas = a_histogram(counts, cutoff=100.0).picture(46, 24)
+    line = int(np.flatnonzero(canvas.glyph[3] == ord("┊"))[0])
+    columns = (canvas.glyph[2:22] >= 0x2581) & (canvas.glyph[2:22] <= 0x2588)
+    assert columns[:, line + 1].sum() > 10
+    assert columns[:, line - 1].sum() <= 1
 
 
 async def test_the_line_moves_in_round_steps_and_stops_at_the_ends() -> None:

@@ -167,14 +167,15 @@ class ScoreHistogram(PlotWidget, can_focus=True):
         low, high = self._ends()
         high = high if high > low else low + 1.0
         height = canvas.height - 4
-        most, per_cell = self._per_cell(canvas.width - 7, low, high)
-        y = even_scale(0.0, most, height, from_zero=True)
+        # The labels' width depends on the heights, and these a little on the room that the labels leave.
+        most = float(self._per_cell(canvas.width - 7, low, high)[0].max())
+        y = even_scale(0.0, max(most, 1.0), height, from_zero=True)
         left = gutter(y, height)
-        most, per_cell = self._per_cell(canvas.width - left, low, high)
-        y = even_scale(0.0, most, height, from_zero=True)
+        per_cell, at = self._per_cell(canvas.width - left, low, high)
+        y = even_scale(0.0, max(float(per_cell.max()), 1.0), height, from_zero=True)
         x = Scale(low=low, high=high)
         area = PlotArea(canvas, left=left, top=2, width=canvas.width - left, height=height, x=x, y=y)
-        line = -1 if self._cutoff is None else int(area.columns([self._cutoff])[0])
+        line = -1 if at < 0 else left + at
         self._draw_columns(area, per_cell / y.high, line)
         area.y_labels()
         area.x_axis()
@@ -182,22 +183,34 @@ class ScoreHistogram(PlotWidget, can_focus=True):
         if line >= 0:
             self._draw_line(area, line)
 
-    def _per_cell(self, cells: int, low: float, high: float) -> tuple[float, Vector]:
-        """Share the counts out to columns of cells by area, and scale them to counts a bin."""
+    def _per_cell(self, cells: int, low: float, high: float) -> tuple[Vector, int]:
+        """Share the counts out to columns of cells by area, and return where the line's own cell is (-1: nowhere).
+
+        Each side of the line fills the cells on its side, so that nothing of a heap right at the line is hidden under it. A
+        column is as high as the bin it lies in: the axis counts what one bin holds.
+        """
         assert self._histogram is not None
         edges = np.asarray(self._histogram.edges, dtype=np.float64) + self._offset
         counts = np.asarray(self._histogram.counts, dtype=np.float64)
-        total = np.concatenate([[0.0], np.cumsum(counts)])
-        shared = np.diff(np.interp(np.linspace(low, high, cells + 1), edges, total))
-        # A column as high as the bin it lies in: the axis counts what one bin holds, not what one cell holds.
-        shared *= cells / counts.size
-        return max(float(shared.max()), 1.0), shared
+        bin_width = (high - low) / counts.size
+        heights = np.zeros(cells)
+        line = -1
+        if self._cutoff is not None and low <= self._cutoff <= high:
+            line = min(cells - 1, int((self._cutoff - low) / (high - low) * cells))
+        parts = [(0, cells, low, high)]
+        if line >= 0 and self._cutoff is not None:
+            parts = [(0, line, low, self._cutoff), (line + 1, cells, self._cutoff, high)]
+        for first, last, start, end in parts:
+            if last > first and end > start:
+                walls = np.linspace(start, end, last - first + 1)
+                heights[first:last] = (
+                    _counts_between(walls, edges, counts) * bin_width / (walls[1] - walls[0])
+                )
+        return heights, line
 
     def _draw_columns(self, area: PlotArea, share: Vector, line: int) -> None:
         eighths = np.rint(share * area.height * 8).astype(np.intp)
         eighths[(share > 0) & (eighths == 0)] = 1  # a single unit is seen
-        if line >= 0:
-            eighths[line - area.left] = 0  # the line's own cell stays free for it
         filled = 8 * (area.height - 1 - np.arange(area.height))[:, None]
         level = np.clip(eighths[None, :] - filled, 0, 8)
         column = np.arange(area.width) + area.left
@@ -227,3 +240,8 @@ class ScoreHistogram(PlotWidget, can_focus=True):
         both = f"{below}, {above}"
         start = column + 2 if len(both) <= room_right else max(0, column - 1 - len(both))
         area.canvas.text(start, 1, both, Ink.TEXT)
+
+
+def _counts_between(walls: Vector, edges: Vector, counts: Vector) -> Vector:
+    """Return the counts between walls, each bin's spread evenly over it."""
+    return np.diff(np.interp(walls, edges, np.concatenate([[0.0], np.cumsum(counts)])))
