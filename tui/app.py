@@ -313,7 +313,7 @@ class CutbankApp(SafeApp[int]):
 
     def tell(self, words: str, *, warning: bool = False) -> None:
         """Say something at the bottom of the screen, until the next key."""
-        if words and self.room is not None and self.room.is_mounted:
+        if words and self.room is not None and self.room.is_attached:
             self.room.tell(words, warning=warning)
 
     def _refresh_room(self) -> None:
@@ -321,7 +321,7 @@ class CutbankApp(SafeApp[int]):
             self.room.refresh_all()
 
     def _refresh_top(self) -> None:
-        if self.room is not None and self.room.is_mounted:
+        if self.room is not None and self.room.is_attached:
             self.room.refresh_top()
 
     def data_name(self) -> str:

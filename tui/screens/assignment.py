@@ -138,7 +138,7 @@ class AssignmentScreen(Room):
     def draw(self) -> None:
         """Words, picture and counts for the line where it stands."""
         width = self.size.width - 2
-        if width <= 0 or not self.is_mounted:
+        if width <= 0:
             return
         rule, facts = self.query_one("#rule", Lines), self.query_one("#facts", Lines)
         study, reading, cutoff = self.study, self._reading, self.cutoff
@@ -202,8 +202,8 @@ class AssignmentScreen(Room):
         joins = (holds if side in ("at or above", "below") else holds_below).removeprefix("at or ")
         heavy, many = reading.heaviest
         rows = [
-            (holds_below, counts.below, "" if treats_above else "treated"),
-            (holds, counts.above, "treated" if treats_above else ""),
+            (holds_below, counts.below, "comparison" if treats_above else "treated"),
+            (holds, counts.above, "treated" if treats_above else "comparison"),
             ("on the line", counts.on_line, f"counted {joins} it" if counts.on_line else ""),
             ("different scores", reading.distinct, f"the most common is {width_text(heavy)}, {many:,} times"),
             ("without a score", reading.missing, "left out" if reading.missing else ""),

@@ -84,7 +84,6 @@ class EffectScreen(EffectKeys):
 
     def on_mount(self) -> None:
         """A screen that is opened after the data have come asks for its line now."""
-        super().on_mount()
         if self.bench.workbench is not None:
             self._ask_for_line(self.bench.workbench)
 
@@ -178,7 +177,6 @@ class EffectScreen(EffectKeys):
         self.set_class(height < 22 or width < 50, "compact")
         self.set_class(height < 14 or width < 40, "tiny")
         self.set_class(width >= SIDE_BY_SIDE, "wide")
-        super().on_resize(event)
 
     def refresh_view(self) -> None:
         """Bring words and pictures to where we stand."""
@@ -188,7 +186,7 @@ class EffectScreen(EffectKeys):
 
     def _refresh_words(self) -> None:
         width = self.size.width - 2
-        if width <= 0 or not self.is_mounted:
+        if width <= 0:
             return
         desk, standing = self.bench.desk, self.standing
         shown = standing is not None and desk is not None

@@ -10,7 +10,7 @@ from textual.binding import Binding, BindingType
 from textual.widget import Widget
 
 from study.document import Study
-from study.options import option_named
+from study.options import BY_NAME, option_named
 from study.wording import figure, percent, width_text
 from tui.look import Ink
 from tui.screens.effect_words import headline_lines
@@ -72,13 +72,15 @@ class ChoicesPage(Page):
     def follow(self) -> None:
         """Show the effect and the choices as they are."""
         desk, standing = self.bench.desk, self._room.standing
-        if desk is None or not self.is_mounted:
+        if desk is None or not self.query(ChoiceForm):
             return
         width = max(20, self.size.width - 2)
         if standing is not None:
             self.query_one("#effect", Lines).show(headline_lines(standing, width))
         why_not = desk.why_read_only
-        self.query_one(ChoiceForm).set_choices([_choice(desk.study, name, why_not) for name in _LABELS])
+        self.query_one(ChoiceForm).set_choices(
+            [_choice(desk.study, name, why_not) for name in _LABELS if name in BY_NAME]
+        )
 
     @on(ChoiceForm.ChoiceEdited)
     def _edited(self, event: ChoiceForm.ChoiceEdited) -> None:

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Final
 
 from study.document import Study
 from tui.look import Ink
@@ -13,6 +13,15 @@ if TYPE_CHECKING:  # these bring numpy, which the first screen must not wait for
     from estimation.effect import Effect
     from study.wording import AnswerRow
     from tui.widgets.answers import Answer
+
+
+_RULES: Final = {
+    "mse": "MSE-optimal",
+    "coverage": "coverage-optimal",
+    "bias-aware": "shortest bias-aware",
+    "mse per side": "MSE-optimal by side",
+    "coverage per side": "coverage-optimal by side",
+}
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -62,9 +71,9 @@ def _mark(standing: Standing) -> str:
     from study.wording import width_text
 
     if standing.own:
-        rule = standing.effect.bandwidths.rule
-        return f"the study's own width ({'chosen' if rule == 'chosen' else rule})"
-    return f"the study's own is {width_text(standing.own_width)}: Enter keeps this one"
+        rule = _RULES.get(standing.effect.bandwidths.rule, "")
+        return "the study's own width" + (f" ({rule})" if rule else "")
+    return f"not the study's {width_text(standing.own_width)}: Enter keeps it"
 
 
 def sentence_lines(standing: Standing, study: Study, width: int) -> list[str]:
@@ -115,8 +124,8 @@ def why_lines(standing: Standing, width: int, most: int) -> list[Line]:
 def choices_line(study: Study) -> Line:
     """The choices of the estimate in one line."""
     chosen = study.estimate
-    parts = [f"{chosen.kernel} kernel", f"order {chosen.order}", f"{chosen.interval} interval leads"]
-    parts.append(f"variance {'clustered' if study.columns.cluster else chosen.variance}")
+    parts = [f"{chosen.kernel} kernel", f"order {chosen.order}", f"{chosen.interval} leads"]
+    parts.append("clustered errors" if study.columns.cluster else f"{chosen.variance} errors")
     if chosen.donut:
         parts.append(f"donut {chosen.donut:g}")
     if study.columns.covariates:
@@ -124,26 +133,26 @@ def choices_line(study: Study) -> Line:
     return [(", ".join(parts), Ink.MUTED)]
 
 
-def all_text(standing: Standing, study: Study, width: int = 100) -> list[str]:
-    """Everything that the screen says, in whole sentences."""
+def all_text(standing: Standing, study: Study) -> list[str]:
+    """Everything that the screen says, a sentence or an answer a line, for others to wrap."""
     from study.disagreement import disagreement
-    from study.wording import answers_table
+    from study.wording import answers_table, effect_sentence
 
     effect = standing.effect
-    lines = [*sentence_lines(standing, study, width), ""]
+    lines = [effect_sentence(effect, study), ""]
     rows = answers_table(effect)
     names = max(len(row.name) for row in rows)
     for row in rows:
         if row.reason is not None:
-            lines += wrapped(f"{row.name.ljust(names)}  none: {row.reason}", width, indent=" " * (names + 2))
+            lines.append(f"{row.name.ljust(names)}  none: {row.reason}")
         else:
             lead = "leads; " if row.leads else ""
-            said = f"{row.name.ljust(names)}  {row.estimate} ({row.low} to {row.high}): {lead}{row.basis}"
-            lines += wrapped(said, width, indent=" " * (names + 2))
-    lines.append("")
-    for sentence in disagreement(effect):
-        lines += wrapped(sentence, width)
+            lines.append(
+                f"{row.name.ljust(names)}  {row.estimate} ({row.low} to {row.high}): {lead}{row.basis}"
+            )
+    lines += ["", *disagreement(effect)]
     for note in effect.notes:
-        words = f"{'Caution: ' if note.severity == 'caution' else ''}{note.sentence} {note.remedy}".strip()
-        lines += wrapped(words, width)
+        lines.append(
+            f"{'Caution: ' if note.severity == 'caution' else ''}{note.sentence} {note.remedy}".strip()
+        )
     return lines

@@ -149,6 +149,7 @@ def draw_chart(chart: EffectChart, prepared: Prepared, at: Bandwidths, *, reach:
     count = max(8, min(40, (chart.size.width or 80) // 4))
     bins = bench.bins(outcome, reach, count)
     curve = bench.curve(outcome, at)
+    curve = replace(curve, below=_ascending(curve.below))
     binary = prepared.effect.binary
     if binary:
         bins = replace(bins, below=_bins_in_per_cent(bins.below), above=_bins_in_per_cent(bins.above))
@@ -162,6 +163,11 @@ def draw_chart(chart: EffectChart, prepared: Prepared, at: Bandwidths, *, reach:
         label=f"{outcome}, % with it" if binary else outcome,
         score=score if prepared.effect.cutoff is not None else f"{score} less its cutoff",
     )
+
+
+def _ascending(side: CurveSide) -> CurveSide:
+    """The curve from left to right, as it is drawn; the lower side is computed from the line outward."""
+    return replace(side, x=side.x[::-1], fit=side.fit[::-1], low=side.low[::-1], high=side.high[::-1])
 
 
 def _bins_in_per_cent(side: BinSide) -> BinSide:

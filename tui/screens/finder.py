@@ -25,7 +25,7 @@ class Finder(Page):
 
     AUTO_FOCUS = "Entry"
     DEFAULT_CSS = """
-    Finder Entry { border: none; height: 1; padding: 0; background: transparent; margin-bottom: 1; }
+    Finder Entry { padding: 0; background: transparent; margin-bottom: 1; }
     """
     BINDINGS: ClassVar[list[BindingType]] = [
         Binding("up", "move(-1)", show=False, priority=True),
@@ -41,7 +41,7 @@ class Finder(Page):
 
     def inside(self) -> Iterator[Widget]:
         """The field and what it finds."""
-        yield Entry(placeholder="a word of what you want to do")
+        yield Entry(placeholder="a word of what you want to do", compact=True)
         yield VTable(empty="Nothing is called that; try another word.")
 
     def on_mount(self) -> None:

@@ -154,12 +154,18 @@ class TextPage(Page):
         self.query_one(Scroll).fill(lines)
 
 
-class HelpPage(TextPage):
+class HelpPage(Page):
     """The keys of a screen from the one table, and its words explained."""
 
+    leave_keys = (("↑↓", "scroll"), ("Esc", "back"))
+
     def __init__(self, room: Room) -> None:
+        super().__init__(f"{room.about.title}: {room.about.about}")
         self._room = room
-        super().__init__(f"{room.about.title}: {room.about.about}", [])
+
+    def inside(self) -> Iterator[Widget]:
+        """The help."""
+        yield Scroll()
 
     def on_resize(self, event: events.Resize) -> None:
         """Set the help for this width."""

@@ -7,6 +7,7 @@ from typing import TYPE_CHECKING, ClassVar, cast
 
 from textual import events, on
 from textual.app import ComposeResult
+from textual.binding import Binding, BindingType
 from textual.containers import Vertical
 from textual.screen import Screen
 from textual.widget import Widget
@@ -93,8 +94,8 @@ class Room(Screen[None]):
 
     def refresh_all(self) -> None:
         """Bring header, body and keys up to date."""
-        if not self.is_mounted:
-            return
+        if not self.query(Foot):
+            return  # asked before the screen was composed: its mounting comes back here
         self.refresh_top()
         self.refresh_view()
         self.refresh_keys()
@@ -123,6 +124,8 @@ class Room(Screen[None]):
 
     def action_key(self, id: str) -> None:
         """Do what a key is for, or say why it can't be done now."""
+        if self.asking:
+            return  # a key that the field has no use for
         key = key_named(id)
         self.query_one(Foot).hush()
         reason = self.why_not_key(key)
@@ -174,9 +177,11 @@ class Foot(Vertical):
     """The bottom of a screen: its keys, or a sentence until the next key, or a question."""
 
     DEFAULT_CSS = """
-    Foot > Entry { display: none; border: none; height: 1; padding: 0; background: transparent; }
+    Foot > Entry { display: none; padding: 0; background: transparent; }
     Foot.asking > Entry { display: block; }
     """
+
+    BINDINGS: ClassVar[list[BindingType]] = [Binding("escape", "close", show=False)]
 
     def __init__(self, *, id: str | None = None) -> None:
         super().__init__(id=id)
@@ -191,7 +196,7 @@ class Foot(Vertical):
     def compose(self) -> ComposeResult:
         """Words above, the field below them, a hint under it."""
         yield Lines(id="said")
-        yield Entry(id="entry", select_on_focus=False)
+        yield Entry(id="entry", select_on_focus=False, compact=True)
         yield Lines(id="hint")
 
     @property
@@ -267,14 +272,9 @@ class Foot(Vertical):
         if self._take is not None and self._typed is not None:
             self._typed(event.value.strip())
 
-    def on_key(self, event: events.Key) -> None:
-        """Escape leaves the question; nothing else reaches the screen meanwhile."""
-        if not self.asking:
-            return
-        event.stop()
-        if event.key == "escape":
-            event.prevent_default()
-            self.close()
+    def action_close(self) -> None:
+        """Escape leaves the question."""
+        self.close()
 
     def close(self) -> None:
         """Take the question away."""
