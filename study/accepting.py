@@ -37,7 +37,7 @@ def accept(option: Option, value: object) -> object:
     """
     match option.kind:
         case "text":
-            return _text(value)
+            return value if value == "" == option.default else _text(value)
         case "yes/no":
             if isinstance(value, bool):
                 return value

@@ -13,7 +13,7 @@ from estimation.choices import Choices
 from study.accepting import Refused, accept
 from study.errors import StudyError
 from study.literal import clean, quoted
-from study.options import AREA_SIDES, BY_NAME, OPTIONS, SECTIONS
+from study.options import AREA_SIDES, BY_NAME, OPTIONS, SECTIONS, Option
 from study.refusals import hint_for_missing, not_allowed, not_toml, refusal, unknown
 from study.saving import write_whole
 
@@ -225,8 +225,13 @@ def edit(study: Study, changes: Mapping[str, object]) -> Study:
             raise unknown(study.path, name)
         else:
             values[name] = BY_NAME[name].default if value is None else value
-    given = {name: value for name, value in values.items() if value != BY_NAME[name].default}
+    given = {name: value for name, value in values.items() if not _is_default(BY_NAME[name], value)}
     return _build(study.path, given, study.text)
+
+
+def _is_default(option: Option, value: object) -> bool:
+    # Not by equality alone: true is no whole number, although Python has True == 1.
+    return value == option.default and isinstance(value, bool) == isinstance(option.default, bool)
 
 
 def save_study(study: Study) -> None:

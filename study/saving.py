@@ -47,6 +47,7 @@ def fill_whole(path: Path, fill: Callable[[Path], None]) -> None:
         os.close(os.open(temporary, os.O_WRONLY | os.O_CREAT | os.O_EXCL, 0o600))
         try:
             fill(temporary)
+            temporary.chmod(0o600)  # a writer may have put a file of its own there
             _sync(temporary)
             temporary.replace(target)
         except BaseException:

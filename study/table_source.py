@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import json
 import re
 from collections.abc import Iterator, Mapping, Sequence
 from contextlib import contextmanager
@@ -333,11 +334,8 @@ def _explained(error: duckdb.Error, source: Path) -> StudyError:
             "Correct that line, or the quotes in or before it.",
             BAD_DATA,
         )
-    malformed = re.search(r"Malformed JSON in file .*?in line (\d+)", message, re.DOTALL)
-    if malformed:
-        return StudyError(
-            f"{shown}: is not valid JSON near line {malformed.group(1)}.", "Correct it.", BAD_DATA
-        )
+    if source.suffix.lower() in JSON_LINES:
+        return _bad_json(source)
     if isinstance(error, duckdb.ConversionException | duckdb.OutOfRangeException):
         return _misfit()
     ending = source.suffix.lower()
@@ -346,3 +344,20 @@ def _explained(error: duckdb.Error, source: Path) -> StudyError:
         "Export it again from the program that made it.",
         BAD_DATA,
     )
+
+
+def _bad_json(source: Path) -> StudyError:
+    where = "can't be read as JSON lines"
+    with source.open("rb") as stream:
+        for number, line in enumerate(stream, 1):
+            if line.strip() and not _is_object(line):
+                where = f"line {number} is not one JSON object"
+                break
+    return StudyError(f"{clean(source.name)}: {where}.", "Write one JSON object a line, in UTF-8.", BAD_DATA)
+
+
+def _is_object(line: bytes) -> bool:
+    try:
+        return isinstance(json.loads(line), dict)
+    except ValueError:
+        return False

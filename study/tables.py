@@ -177,12 +177,10 @@ def parts_of(opened: OpenTable, *, numbers: Mapping[str, str], labels: Sequence[
         Status 3: a column that should hold numbers doesn't, or holds an infinite one.
     """
     for name, part in numbers.items():
-        if kind_of(opened.types[name]) not in NUMERIC:
+        if kind_of(opened.types[name]) not in NUMERIC and not _is_empty(opened, name):
             raise _not_numeric(opened, name, part)
     place = _free_name(opened, "row")
-    picked = [
-        f"CAST({identifier(name)} AS DOUBLE) AS {identifier(f'n{i}')}" for i, name in enumerate(numbers)
-    ]
+    picked = [f"{as_number(opened, name)} AS {identifier(f'n{i}')}" for i, name in enumerate(numbers)]
     levels: list[list[str]] = []
     for i, name in enumerate(labels):
         text = _as_text(opened, name)
@@ -224,6 +222,8 @@ def as_number(opened: OpenTable, name: str) -> str:
     a cutoff of 52.3.
     """
     column = identifier(name)
+    if kind_of(opened.types[name]) not in NUMERIC:
+        return "CAST(NULL AS DOUBLE)"  # a column without any value, which may have got any type
     if opened.types[name] == "FLOAT":
         column = f"CAST({column} AS VARCHAR)"
     return f"CAST({column} AS DOUBLE)"
@@ -259,6 +259,11 @@ def _as_text(opened: OpenTable, name: str) -> str:
             f"ELSE CAST({column} AS VARCHAR) END"
         )
     return f"nullif(CAST({column} AS VARCHAR), '')"
+
+
+def _is_empty(opened: OpenTable, name: str) -> bool:
+    counted = opened.connection.execute(f"SELECT count({_as_text(opened, name)}) FROM {opened.from_clause}")
+    return bool(counted.fetchall()[0][0] == 0)
 
 
 def _free_name(opened: OpenTable, wanted: str) -> str:

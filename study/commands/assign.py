@@ -70,7 +70,7 @@ def _write(assigned: Assigned, path: Path, form: str) -> None:
         for start in range(0, assigned.rows_read, _CHUNK):
             _insert(database, assigned, slice(start, start + _CHUNK))
         quoted_path = "'" + str(path).replace("'", "''") + "'"
-        database.execute(f"COPY assigned TO {quoted_path} ({form})")
+        database.execute(f"COPY assigned TO {quoted_path} ({form}, USE_TMP_FILE false)")
 
 
 def _insert(database: object, assigned: Assigned, part: slice) -> None:

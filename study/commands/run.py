@@ -9,6 +9,7 @@ from study.commands.speaking import needs_plain_marks, page_width, progress
 from study.document import load_study
 from study.errors import BAD_STUDY, StudyError
 from study.literal import clean
+from study.readiness import require_complete
 from study.saving import write_whole
 
 
@@ -20,12 +21,12 @@ def run_study(study_path: Path, *, out: Path | None, as_json: bool, ascii_only: 
     StudyError
         Whatever keeps the study from being estimated; nothing is on standard output then.
     """
-    from study.analysis import (
-        Workbench,
-    )  # numpy, scipy and DuckDB: not before the study file is known to be good
+    study = load_study(study_path)
+    require_complete(study)
+    # numpy, scipy and DuckDB: not before the study file is known to be good.
+    from study.analysis import Workbench
     from study.page import result_lines
 
-    study = load_study(study_path)
     with progress() as report:
         bench = Workbench.open(study, progress=report)
         result = bench.run(report)

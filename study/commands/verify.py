@@ -7,6 +7,7 @@ from pathlib import Path
 from study.commands.speaking import progress
 from study.document import load_study
 from study.literal import clean
+from study.readiness import require_complete
 
 
 def verify_study(study_path: Path) -> int:
@@ -17,12 +18,13 @@ def verify_study(study_path: Path) -> int:
     StudyError
         The first thing that is wrong.
     """
+    study = load_study(study_path)
+    require_complete(study)
     import numpy as np  # not before the study file is known to be good
 
     from study.assemble import assemble
     from study.wording import plural, rule_sentence
 
-    study = load_study(study_path)
     with progress() as report:
         assigned = assemble(study, progress=report)
     used = assigned.reason == 0
