@@ -20,9 +20,10 @@ import textual
 from rich.cells import cell_len, split_graphemes
 from rich.color import ColorSystem
 from rich.style import Style
-from textual import events
+from textual import events, on
 from textual._compositor import ChopsUpdate, LayoutUpdate
 from textual.app import App
+from textual.driver import Driver
 from textual.strip import Strip
 
 from tui.look import THEMES, Look, detect_look
@@ -264,8 +265,7 @@ class WireApp(App[Result]):
 
     def action_redraw(self) -> None:
         """Send the whole screen again (after something else wrote on the terminal)."""
-        self._forget_shown()
-        self.refresh()
+        self._came_back()
 
     # ---- Textual's private parts ------------------------------------------------------------------------------
 
@@ -342,9 +342,17 @@ class WireApp(App[Result]):
         self._forget_shown()
         await super()._on_resize(event)
 
-    def _resume_signal(self) -> None:
+    @on(Driver.SignalResume)
+    def _came_back(self) -> None:
+        """Send everything again after the program was stopped and continued: others have written meanwhile."""
+        self._pace = Pace()  # an answer that was due went to the shell
         self._forget_shown()
+        self._send()
+
+    def _resume_signal(self) -> None:
+        # After `suspend()` Textual calls this by name; a handler of ours for it would never run.
         super()._resume_signal()
+        self._came_back()
 
 
 _NO_APP = Look()

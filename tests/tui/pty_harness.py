@@ -87,6 +87,18 @@ class Terminal:
         """Send keys as the terminal would."""
         os.write(self._fd, keys.encode())
 
+    def signal(self, number: int) -> None:
+        """Send the program a signal."""
+        os.kill(self._pid, number)
+
+    def show(self, words: str | bytes) -> None:
+        """Write on the screen as another program would."""
+        self._stream.feed(words.encode() if isinstance(words, str) else words)
+
+    def fileno(self) -> int:
+        """The terminal's side of the line."""
+        return self._fd
+
     def read(self, seconds: float) -> int:
         """Read for so long and return how many bytes came."""
         before, end = self.sent, time.monotonic() + seconds

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import random
 import re
+import signal
 
 import pyte
 import pytest
@@ -204,6 +205,22 @@ def test_resizing_leaves_no_remains() -> None:
         terminal.settle()
         assert terminal.cells() == small
         assert "local randomisation" in terminal.text()
+
+
+def test_coming_back_after_a_stop_draws_everything_anew() -> None:
+    with Terminal(APP, size=(100, 30)) as terminal:
+        terminal.wait_for("local randomisation")
+        terminal.settle()
+        before = terminal.cells()
+        terminal.signal(signal.SIGTSTP)
+        terminal.read(0.5)
+        terminal.show("\x1b[2J\x1b[Hsomething else wrote here")
+        terminal.signal(signal.SIGCONT)
+        terminal.wait_for("local randomisation")
+        terminal.settle()
+        assert terminal.cells() == before
+        terminal.type(RIGHT)
+        terminal.wait_for("width 6.39")
 
 
 @pytest.mark.parametrize(
