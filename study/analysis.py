@@ -305,7 +305,8 @@ class Workbench:
 
     @cached_property
     def _used(self) -> Mask:
-        return self.assigned.reason == 0
+        used: Mask = self.assigned.reason == 0
+        return used
 
     def _rows(self, site: str | None) -> Codes:
         return np.concatenate(self._outward(site))
