@@ -97,13 +97,29 @@ def open_table(
 
     check_file(source)
     try:
-        connection = _connect(source)
-        try:
-            yield _opened(connection, source, columns, table, rows)
-        finally:
-            connection.close()
+        with interruptible():
+            connection = _connect(source)
+            try:
+                yield _opened(connection, source, columns, table, rows)
+            finally:
+                connection.close()
     except duckdb.Error as error:
         raise _explained(error, source) from None
+
+
+@contextmanager
+def interruptible() -> Iterator[None]:
+    """Ctrl-C in the middle of a query is KeyboardInterrupt, as everywhere else; the database says RuntimeError."""
+    import duckdb  # deferred as above
+
+    try:
+        yield
+    except duckdb.InterruptException:
+        raise KeyboardInterrupt from None
+    except RuntimeError as error:
+        if str(error) == "Query interrupted":
+            raise KeyboardInterrupt from None
+        raise
 
 
 def _connect(source: Path) -> duckdb.DuckDBPyConnection:

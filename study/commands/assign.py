@@ -10,6 +10,7 @@ from study.document import Study, load_study
 from study.errors import BAD_STUDY, StudyError
 from study.literal import clean
 from study.saving import fill_whole
+from study.table_source import interruptible
 
 if TYPE_CHECKING:
     from study.assemble import Assigned
@@ -60,9 +61,12 @@ def _write(assigned: Assigned, path: Path, form: str) -> None:
     import duckdb
 
     # A connection of its own: it needs to write one file, which the readers' connections are never allowed to.
-    with duckdb.connect(
-        ":memory:", config={"autoinstall_known_extensions": False, "temp_directory": ""}
-    ) as database:
+    with (
+        interruptible(),
+        duckdb.connect(
+            ":memory:", config={"autoinstall_known_extensions": False, "temp_directory": ""}
+        ) as database,
+    ):
         database.execute(
             "CREATE TABLE assigned (row BIGINT, site VARCHAR, side VARCHAR, position DOUBLE, segment VARCHAR, "
             "used BOOLEAN, reason VARCHAR)"

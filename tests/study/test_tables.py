@@ -3,6 +3,8 @@ from __future__ import annotations
 import json
 import math
 import os
+import signal
+import threading
 from pathlib import Path
 
 import duckdb
@@ -12,6 +14,7 @@ import pyreadstat
 import pytest
 
 from study.errors import StudyError
+from study.table_source import interruptible
 from study.tables import count_rows, describe_columns, natural_key, open_table, parts_of, read_table
 
 CSV = "pier,darkness,takings,open,since\nNorth,1.5,10,true,2020-01-31\nSouth,2,NA,false,\n,.,12,,2021-02-01\n"
@@ -436,3 +439,22 @@ def test_json_lines_are_typed(tmp_path: Path) -> None:
     table = read_table(path, ["a", "b"])
     same(table.columns["a"], [1.0, 2.5, math.nan])
     same(table.columns["b"], [1.0, math.nan, 0.0])
+
+
+def test_an_interrupted_query_is_an_interrupt_and_no_damaged_file(tmp_path: Path) -> None:
+    path = write(tmp_path / "a.csv", CSV)
+    timer = threading.Timer(0.3, os.kill, (os.getpid(), signal.SIGINT))
+    timer.start()
+    with open_table(path) as opened, pytest.raises(KeyboardInterrupt), interruptible():
+        opened.connection.execute(
+            "SELECT count(*) FROM range(1000000000000) AS t(i) WHERE i % 7 = 3"
+        ).fetchall()
+    timer.join()
+
+
+def test_a_column_without_any_value_is_a_column_of_missing_numbers(tmp_path: Path) -> None:
+    path = write(tmp_path / "a.csv", "a,b\n,1\nNA,2\n")
+    with open_table(path) as opened:
+        parts = parts_of(opened, numbers={"a": "score"}, labels=["a"])
+    assert np.isnan(parts.numbers["a"]).all()
+    assert (parts.labels["a"].levels, parts.labels["a"].codes.tolist()) == ((), [-1, -1])
