@@ -11,21 +11,17 @@ Private parts of Textual are used in this module only, and only in versions it w
 
 from __future__ import annotations
 
-import re
-from collections.abc import Iterable
 from time import monotonic
 from typing import TYPE_CHECKING, Any, TypeVar
 
 import textual
-from rich.cells import cell_len, split_graphemes
 from rich.color import ColorSystem
-from rich.style import Style
 from textual import events, on
 from textual._compositor import ChopsUpdate, LayoutUpdate
 from textual.app import App
 from textual.driver import Driver
-from textual.strip import Strip
 
+from tui.cell_diff import Picture
 from tui.look import THEMES, Look, detect_look
 
 if TYPE_CHECKING:
@@ -36,162 +32,9 @@ if TYPE_CHECKING:
 TESTED_VERSIONS = ("8.2",)
 WORKS_HERE = textual.__version__.rpartition(".")[0] in TESTED_VERSIONS
 
-# Characters that take one cell everywhere and combine with nothing; other text is divided with care.
-_SIMPLE = re.compile(
-    "[ -~\u00a0-\u02ff\u2010-\u2027\u2030-\u205e\u2190-\u22ff\u2500-\u25fc\u2800-\u28ff\ufffd]*"
-)
-_CLEAR = "\x1b[m\x1b[2J"
 _QUERY = "\x1b[6n"
 _PATIENCE_S = 1.0
 _SILENCES = 3  # unanswered queries after which the terminal is taken to be one that never answers
-_SHORT_GAP = 4  # unchanged cells that are cheaper to send again than to jump over
-
-
-class Picture:
-    """A screen of cells, each a grapheme and a style code; the right half of a wide character is "".
-
-    The wanted screen and the shown one are kept, and `frame` turns the difference into a sequence.
-    """
-
-    def __init__(self, width: int, height: int) -> None:
-        self.width, self.height = width, height
-        self._codes: dict[Style, tuple[str, str]] = {}
-        self._seen_on_blank = {"": ""}  # style code -> the part of it that shows on a blank
-        self._wanted = [[" "] * width for _ in range(height)]
-        self._wanted_style = [[""] * width for _ in range(height)]
-        self._shown: list[list[str]] = []
-        self._shown_style: list[list[str]] = []
-        self._dirty: set[int] = set()
-        self.forget()
-
-    def forget(self) -> None:
-        """Trust nothing the terminal shows: the next frame clears it and sends all that is not blank."""
-        self._shown = [[" "] * self.width for _ in range(self.height)]
-        self._shown_style = [[""] * self.width for _ in range(self.height)]
-        self._dirty.update(range(self.height))
-        self._clear = True
-
-    def put(self, y: int, x: int, strip: Strip, system: ColorSystem, first: int, last: int) -> None:
-        """Write the part of a strip that lies in the columns from `first` up to `last` into the wanted screen."""
-        first, last = max(first, x, 0), min(last, self.width)
-        if not 0 <= y < self.height or first >= last:
-            return
-        words, styles = self._expand(strip, system)
-        words, styles = words[first - x : last - x], styles[first - x : last - x]
-        end = first + len(words)
-        _mend(words)
-        row = self._wanted[y]
-        if row[first] == "" and first:  # half of a wide character is overwritten: the other half goes too
-            row[first - 1] = " "
-        if end < self.width and row[end] == "":
-            row[end] = " "
-        self._wanted[y][first:end] = words
-        self._wanted_style[y][first:end] = styles
-        self._dirty.add(y)
-
-    def _expand(self, strip: Strip, system: ColorSystem) -> tuple[list[str], list[str]]:
-        words: list[str] = []
-        styles: list[str] = []
-        for text, style, control in strip:
-            if control:
-                continue
-            code, blank = ("", "") if style is None else self._code(style, system)
-            if _SIMPLE.fullmatch(text):
-                words.extend(text)
-                if blank == code or " " not in text:
-                    styles.extend([code] * len(text))
-                else:
-                    styles.extend([blank if character == " " else code for character in text])
-                continue
-            for start, end, cells in split_graphemes(text)[0]:
-                if cells:
-                    words.extend([text[start:end], *[""] * (cells - 1)])
-                    styles.extend([code] * cells)
-        return words, styles
-
-    def _code(self, style: Style, system: ColorSystem) -> tuple[str, str]:
-        """Return the codes of a style, and those of them that can be seen on a blank."""
-        found = self._codes.get(style)
-        if found is None:
-            # Links are left out on purpose: no address from data reaches the terminal.
-            code = Strip.render_ansi(style, system)
-            shows_ink = style.reverse or style.underline or style.strike
-            blank = code if shows_ink else Strip.render_ansi(Style(bgcolor=style.bgcolor), system)
-            found = self._codes[style] = (code, blank)
-            self._seen_on_blank[code] = blank
-            self._seen_on_blank[blank] = blank
-        return found
-
-    def frame(self) -> str:
-        """Return what turns the shown screen into the wanted one, and take it as shown; "" when nothing changed."""
-        if not self._dirty:
-            return ""
-        out: list[str] = [_CLEAR] if self._clear else []
-        self._clear = False
-        pen = None
-        for y in sorted(self._dirty):
-            for first, last in self._runs(y):
-                out.append(f"\x1b[{y + 1};{first + 1}H")
-                pen = self._write(out, y, first, last, pen)
-        self._dirty.clear()
-        if pen:
-            out.append("\x1b[m")
-        return "".join(out)
-
-    def _runs(self, y: int) -> Iterable[tuple[int, int]]:
-        """Yield the changed column ranges of a row, near ones joined, none beginning inside a wide character."""
-        wanted, styles = self._wanted[y], self._wanted_style[y]
-        shown, shown_styles = self._shown[y], self._shown_style[y]
-        if wanted == shown and styles == shown_styles:
-            return
-        first = last = -1
-        for x in range(self.width):
-            if wanted[x] == shown[x] and styles[x] == shown_styles[x]:
-                continue
-            if first >= 0 and x - last > _SHORT_GAP:
-                yield self._whole(wanted, first, last)
-                first = -1
-            if first < 0:
-                first = x
-            last = x + 1
-        if first >= 0:
-            yield self._whole(wanted, first, last)
-
-    def _whole(self, wanted: list[str], first: int, last: int) -> tuple[int, int]:
-        while first > 0 and wanted[first] == "":
-            first -= 1
-        while last < self.width and wanted[last] == "":
-            last += 1
-        return first, last
-
-    def _write(self, out: list[str], y: int, first: int, last: int, pen: str | None) -> str | None:
-        wanted, styles = self._wanted[y], self._wanted_style[y]
-        jump = False
-        for x in range(first, last):
-            word, code = wanted[x], styles[x]
-            if jump and word:
-                # Terminals disagree about the width of some characters; after one, say where we are.
-                out.append(f"\x1b[{y + 1};{x + 1}H")
-                jump = False
-            if word == " " and pen is not None and self._seen_on_blank[pen] == code:
-                out.append(word)  # any ink will do on a blank
-                continue
-            if code != pen and word:
-                out.append(f"\x1b[0;{code}m" if code else "\x1b[m")
-                pen = code
-            out.append(word)
-            jump = jump or len(word) > 1 or word == ""
-        self._shown[y][first:last] = wanted[first:last]
-        self._shown_style[y][first:last] = styles[first:last]
-        return pen
-
-
-def _mend(words: list[str]) -> None:
-    """Replace the halves of wide characters that a cut has left at either end."""
-    if words and words[0] == "":
-        words[0] = " "
-    if words and not words[-1].isascii() and cell_len(words[-1]) > 1:
-        words[-1] = " "
 
 
 class Pace:

@@ -14,7 +14,8 @@ from rich.segment import Segment
 from rich.style import Style
 from textual.strip import Strip
 
-from tui.wire import Pace, Picture
+from tui.cell_diff import Picture
+from tui.wire import Pace
 
 APP = python("tests/tui/wire_app.py")
 RIGHT, LEFT = "\x1b[C", "\x1b[D"
@@ -64,6 +65,60 @@ def test_many_small_frames_show_what_one_whole_frame_shows(seed: int, words: lis
     pyte.Stream(big).feed(whole.frame())
     assert seen(small) == seen(big)
     assert picture.frame() == ""
+
+
+@pytest.mark.parametrize("seed", range(30))
+def test_scrolled_rows_are_moved_by_the_terminal_and_end_where_they_are_wanted(seed: int) -> None:
+    """A list under a header, beside a column that does not scroll, goes up and down by a few rows at a time."""
+    draw = random.Random(seed)
+    picture, whole = Picture(60, 16), Picture(60, 16)
+    small, big = pyte.Screen(60, 16), pyte.Screen(60, 16)
+    stream = pyte.Stream(small)
+    lines = [
+        f"{draw.choice(SIMPLE)} row {index} {draw.random():.12f} and further words" for index in range(60)
+    ]
+    beside = draw.choice(["", "", "fixed"])
+    top = 20
+    scrolled = 0
+    for _ in range(12):
+        top = max(0, min(44, top + draw.choice([-9, -3, -2, -1, 1, 2, 3, 9])))
+        header = Strip([Segment(f"{top + 1} of 60", draw.choice(STYLES))])
+        rows = [header] + [
+            Strip(
+                [
+                    Segment(f"{lines[top + y]:50.50}", STYLES[y % 5 if y == 7 else 0]),
+                    Segment(f"{beside:10}", Style()),
+                ]
+            )
+            for y in range(14)
+        ]
+        for y, strip in enumerate(rows):
+            for each in (picture, whole):
+                each.put(y, 0, strip, ColorSystem.EIGHT_BIT, 0, 60)
+        frame = picture.frame()
+        scrolled += "\x1b[r" in frame
+        stream.feed(frame)
+        assert [line.rstrip() for line in small.display[1:15]] == [
+            f"{lines[top + y]:50.50}{beside:10}".rstrip() for y in range(14)
+        ]
+    whole.forget()
+    pyte.Stream(big).feed(whole.frame())
+    assert seen(small) == seen(big)
+    assert scrolled >= 3
+
+
+def test_scrolling_a_list_by_one_row_sends_little_more_than_that_row() -> None:
+    picture = Picture(80, 24)
+
+    def show(first: int) -> str:
+        for y in range(24):
+            words = f"{random.Random(first + y).getrandbits(200):060x} {(first + y):>10}"
+            picture.put(y, 0, Strip([Segment(words, Style())]), ColorSystem.EIGHT_BIT, 0, 80)
+        return picture.frame()
+
+    show(0)
+    assert len(show(1)) < 150
+    assert len(show(0)) < 150
 
 
 def test_a_frame_holds_only_what_changed() -> None:
