@@ -149,14 +149,14 @@ class Canvas:
 
     def vertical(self, x: int, rows: Iterable[int], mark: str, ink: Ink, *, only_blank: bool = True) -> None:
         """Draw a column of marks."""
-        row = np.fromiter(rows, dtype=np.intp)
+        row = np.array(list(rows), dtype=np.intp)
         self.marks(np.full(row.shape, x, dtype=np.intp), row, mark, ink, only_blank=only_blank)
 
     def horizontal(
         self, y: int, columns: Iterable[int], mark: str, ink: Ink, *, only_blank: bool = True
     ) -> None:
         """Draw a row of marks."""
-        column = np.fromiter(columns, dtype=np.intp)
+        column = np.array(list(columns), dtype=np.intp)
         self.marks(column, np.full(column.shape, y, dtype=np.intp), mark, ink, only_blank=only_blank)
 
     def _plain(self, mark: str) -> str:
@@ -165,6 +165,10 @@ class Canvas:
         return ASCII_MARKS.get(mark, "?")
 
     # ---- reading --------------------------------------------------------------------------------------------
+
+    def drawn(self, y: int) -> Mask:
+        """Return which cells of a row hold something, shape (width,)."""
+        return np.asarray(self.glyph[y] != _BLANK, dtype=np.bool_)
 
     def to_text(self) -> list[str]:
         """Return the rows as plain text without blanks at their ends."""

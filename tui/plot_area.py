@@ -247,10 +247,15 @@ class PlotArea:
             self.canvas.vertical(column, range(self.top, self.top + self.height), mark, ink)
 
     def horizontal_rule(self, y: float, mark: str = "╌", ink: Ink = Ink.FAINT) -> None:
-        """Draw a dashed rule at y where nothing else is."""
+        """Draw a dashed rule at y where nothing else is, nor right beside: between the dashes of an edge it would be noise."""
         row = int(self.rows([y])[0])
-        if row >= 0:
-            self.canvas.horizontal(row, range(self.left, self.left + self.width), mark, ink)
+        if row < 0:
+            return
+        drawn = self.canvas.drawn(row)[self.left : self.left + self.width]
+        near = drawn.copy()
+        near[1:] |= drawn[:-1]
+        near[:-1] |= drawn[1:]
+        self.canvas.horizontal(row, np.flatnonzero(~near) + self.left, mark, ink)
 
     # ---- axes -----------------------------------------------------------------------------------------------
 

@@ -98,6 +98,15 @@ def test_marks_lie_on_the_line_and_a_rule_only_where_nothing_is() -> None:
     assert unicodedata.name(text[3][3]).startswith("BRAILLE")
 
 
+def test_a_level_rule_keeps_away_from_what_is_drawn() -> None:
+    area = area_on()
+    area.curve([5, 15], [4.0, 4.0], Ink.EDGE, dashed=True)
+    area.horizontal_rule(4.0)
+    row = area.canvas.to_text()[int(area.rows([4.0])[0])]
+    assert row[:4] == row[16:20] == "╌╌╌╌"
+    assert "╌" not in row[5:15]
+
+
 def test_the_band_is_tinted_between_its_edges_and_nowhere_else() -> None:
     area = area_on()
     area.band([5, 15], [2.0, 2.0], [6.0, 6.0])
