@@ -107,9 +107,19 @@ def tick_labels(ticks: Sequence[float]) -> list[str]:
     gaps = [after - before for before, after in itertools.pairwise(ticks)]
     finest = min(gaps) if gaps else (largest or 1.0)
     if largest >= 1e7 or (largest > 0 and finest < 1e-5):
-        return [f"{tick:.4g}" for tick in ticks]
+        return [with_minus(f"{tick:.4g}") for tick in ticks]
     decimals = max(0, -math.floor(math.log10(finest) + 1e-9)) if finest > 0 else 0
-    return [f"{tick + 0.0:,.{decimals}f}" for tick in ticks]
+    return [with_minus(f"{tick + 0.0:,.{decimals}f}") for tick in ticks]
+
+
+def with_minus(number: str) -> str:
+    """Return a number as text with the minus sign that sentences use; an ASCII canvas turns it back.
+
+    What has been rounded to zero has no sign.
+    """
+    if not number.strip("-0.,"):
+        return number.removeprefix("-")
+    return "−" + number[1:] if number.startswith("-") else number
 
 
 def even_scale(low: float, high: float, rows: int, *, from_zero: bool = False) -> Scale:
@@ -211,9 +221,11 @@ class PlotArea:
         also, top = self._dot_heights(x, high)
         if column.size and np.array_equal(column, also):
             first = column % 2 == 0  # one dot column a cell decides about its tint
-            centre = 4 * np.arange(self.height)[:, None] + 1.5
+            # A third of a cell is enough: with half of it, a thin slanted band would be a row of loose blocks.
+            above = 4 * np.arange(self.height)[:, None] - 0.5
+            covered = np.minimum(bottom[first], above + 4) - np.maximum(top[first], above)
             mask = np.zeros((self.height, self.width), dtype=np.bool_)
-            mask[:, column[first] // 2] = (centre <= bottom[first]) & (centre >= top[first])
+            mask[:, column[first] // 2] = covered >= 4 / 3
             self.canvas.tint(mask, Paper.BAND, x=self.left, y=self.top)
         self.curve(x, low, Ink.EDGE, dashed=True)
         self.curve(x, high, Ink.EDGE, dashed=True)

@@ -492,6 +492,7 @@ def test_answers_share_one_axis_with_zero_on_it() -> None:
     assert "1.0" in lines[0]
     assert "0.0 to 2.0" in lines[0]
     assert abs(lines[0].index("├") - lines[1].index("┤")) <= 1
+    assert "−2.0 to 0.0" in lines[1]
     assert lines[1].index("○") < lines[0].index("●")
     assert "none" in lines[2]
     assert "too few in the window" in lines[2]
@@ -503,6 +504,12 @@ def test_answers_share_one_axis_with_zero_on_it() -> None:
 )
 def test_as_many_decimals_as_the_interval_deserves(length: float, decimals: int) -> None:
     assert decimals_for([Answer(name="a", estimate=0.0, low=0.0, high=length)]) == decimals
+
+
+def test_what_is_rounded_to_zero_has_no_sign() -> None:
+    table = AnswerTable()
+    table.set_answers([Answer(name="a", estimate=-0.001, low=-1.0, high=0.9)])
+    assert "0.0  −1.0 to 0.9" in table.picture(60, 1).to_text()[0]
 
 
 def test_decimals_without_any_interval() -> None:

@@ -11,7 +11,7 @@ import numpy as np
 from study.literal import clean
 from tui.canvas import Canvas, narrow
 from tui.look import Ink
-from tui.plot_area import PlotArea, Scale, padded
+from tui.plot_area import PlotArea, Scale, padded, with_minus
 from tui.widgets.plot import PlotWidget
 
 
@@ -144,7 +144,11 @@ def _known(number: float | None) -> bool:
 
 def _figures(answers: Sequence[Answer], decimals: int) -> list[tuple[str, str, str]]:
     def words(number: float | None) -> str:
-        return f"{number + 0.0:,.{decimals}f}" if number is not None and math.isfinite(number) else ""
+        return (
+            with_minus(f"{number + 0.0:,.{decimals}f}")
+            if number is not None and math.isfinite(number)
+            else ""
+        )
 
     return [
         (
