@@ -12,7 +12,7 @@ from collections.abc import Callable, Mapping
 from dataclasses import replace
 from functools import partial
 from pathlib import Path
-from typing import TYPE_CHECKING, ClassVar
+from typing import TYPE_CHECKING, Any, ClassVar
 
 from textual.app import App
 from textual.binding import Binding, BindingType
@@ -88,6 +88,7 @@ class CutbankApp(SafeApp[int]):
         self.workbench: Workbench | None = None
         self.trouble: tuple[str, str] | None = None
         self.progress = ""
+        self.started = False  # once true the first screen stands, and heavy things may be loaded
         self.browse_from: Path | None = None
         self._saving: Slot[Study, Study] = Slot("save", self._save, show=self._saved, failed=self._not_saved)
         self._opening: Slot[Study, Workbench] = Slot(
@@ -121,6 +122,7 @@ class CutbankApp(SafeApp[int]):
         self.set_look(self.look)
 
     def _begin(self) -> None:
+        self.started = True
         if self.desk is None:
             from tui.screens.browse import Browse
 
@@ -129,6 +131,7 @@ class CutbankApp(SafeApp[int]):
         if self.desk.why_read_only:
             self.tell(self.desk.why_read_only + ".", warning=True)
         self._fetch()
+        self._refresh_room()
 
     def _told_to_end(self, number: int) -> None:
         """The connection was lost, or somebody ends the process: save and give the terminal back."""
@@ -293,6 +296,23 @@ class CutbankApp(SafeApp[int]):
         self.workbench, self.trouble, self.progress = None, (what, do), ""
         self.post_to_rooms(lambda: WorkbenchFailed(what, do))
         self._refresh_room()
+
+    @property
+    def busy(self) -> bool:
+        """Whether something is being read, saved or estimated."""
+        return any(slot.pending for slot in self._slots())
+
+    async def settle(self) -> None:
+        """Wait until nothing is being read, saved or estimated (for leaving tidily, and for tests)."""
+        for slot in self._slots():
+            await slot.settle()
+
+    def _slots(self) -> list[Slot[Any, Any]]:
+        return [
+            self._saving,
+            self._opening,
+            *(slot for room in self._rooms.values() for slot in room.slots()),
+        ]
 
     # ---- where we are -----------------------------------------------------------------------------------------
 

@@ -22,6 +22,9 @@ STALE_S: Final = 600.0
 """Seconds without a touch after which another machine's lock counts as left behind."""
 
 
+_WRITING_S: Final = 5.0  # a lock that can't be read is being written; after this it was left half written
+
+
 @dataclass(frozen=True, slots=True, kw_only=True)
 class Holder:
     """Who has a study open.
@@ -138,6 +141,8 @@ class Lock:
             return 0.0
 
     def _stale(self, holder: Holder) -> bool:
+        if not holder.process:
+            return time.time() - self._touched() > _WRITING_S
         if holder.host == socket.gethostname():
             return not _alive(holder)
         return time.time() - self._touched() > STALE_S

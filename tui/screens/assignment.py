@@ -2,10 +2,10 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Iterator
+from collections.abc import Callable, Iterator, Sequence
 from dataclasses import dataclass, replace
 from pathlib import Path
-from typing import TYPE_CHECKING, ClassVar, Final
+from typing import TYPE_CHECKING, Any, ClassVar, Final
 
 from textual.binding import BindingType
 from textual.containers import Vertical
@@ -66,6 +66,10 @@ class AssignmentScreen(Room):
         yield Vertical(id="picture")
         yield Lines(id="facts")
 
+    def slots(self) -> Sequence[Slot[Any, Any]]:
+        """Reading the score."""
+        return (self._slot,)
+
     # ---- the score --------------------------------------------------------------------------------------------
 
     @property
@@ -98,6 +102,7 @@ class AssignmentScreen(Room):
     def _wanted(self, study: Study | None) -> ScoreRequest | None:
         if (
             study is None
+            or not self.bench.started
             or not study.data.path
             or study.columns.score is None
             or study.assignment.rule != "cutoff"
@@ -210,7 +215,7 @@ class AssignmentScreen(Room):
         ]
         if counts.against is not None:
             against = counts.against
-            said = f"{against.untreated:,} on the treated side did not take it up, {against.treated:,} on the other did"
+            said = f"{against.untreated:,} treated without take-up, {against.treated:,} others with it"
             rows.append(("against the rule", against.untreated + against.treated, said))
         names = max(len(name) for name, _, _ in rows)
         digits = max(len(f"{count:,}") for _, count, _ in rows)

@@ -2,10 +2,10 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Iterator
+from collections.abc import Callable, Iterator, Sequence
 from dataclasses import replace
 from pathlib import Path
-from typing import TYPE_CHECKING, ClassVar, Final
+from typing import TYPE_CHECKING, Any, ClassVar, Final
 
 from textual import on
 from textual.binding import BindingType
@@ -61,12 +61,16 @@ class DataScreen(Room):
         yield VTable(id="columns", empty="f opens a data file or a study.")
         yield Lines(id="detail")
 
+    def slots(self) -> Sequence[Slot[Any, Any]]:
+        """Describing the columns and counting rows."""
+        return (self._slot, self._count)
+
     # ---- the file ---------------------------------------------------------------------------------------------
 
     def refresh_view(self) -> None:
         """Describe another file when the study has one, else only show the roles anew."""
         desk = self.bench.desk
-        if desk is None:
+        if desk is None or not self.bench.started:
             return
         source = (desk.study.data_file, desk.study.data.table) if desk.study.data.path else None
         if source != self._source:
@@ -132,6 +136,7 @@ class DataScreen(Room):
             desk.view = replace(desk.view, data_row=event.row)
             self.bench.view_moved()
         self._detail()
+        self.hush()
         self.refresh_keys()
 
     def _detail(self) -> None:

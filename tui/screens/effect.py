@@ -2,9 +2,9 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Iterator
+from collections.abc import Callable, Iterator, Sequence
 from dataclasses import replace
-from typing import TYPE_CHECKING, ClassVar, cast
+from typing import TYPE_CHECKING, Any, ClassVar, cast
 
 from textual import events
 from textual.binding import BindingType
@@ -30,6 +30,7 @@ from tui.slot import Slot
 from tui.state import StudyEdited, WorkbenchReady
 
 if TYPE_CHECKING:
+    from estimation.line import Sweep
     from study.analysis import Workbench
     from tui.screens.effect_work import Asked, Found, Prepared
     from tui.widgets.chart import EffectChart
@@ -65,8 +66,12 @@ class EffectScreen(EffectKeys):
         super().__init__(name="effect")
         self.seen: list[Found] = []
         self._problem = ""
+        self._asked_of: Workbench | None = None
         self._prepare: Slot[Asked, Prepared] = Slot(
             "prepare", _prepare, show=self._show_prepared, failed=self._failed
+        )
+        self._sweeping: Slot[Prepared, Sweep] = Slot(
+            "sweep", _sweep_of, show=self._show_sweep, failed=self._sweep_failed
         )
         self._effect: Slot[Asked, Found] = Slot("effect", _find, show=self._show_found, failed=self._failed)
         self.best_slot: Slot[Asked, float] = Slot(
@@ -82,10 +87,15 @@ class EffectScreen(EffectKeys):
                 yield Lines(id="choices")
                 yield Lines(id="why")
 
-    def on_mount(self) -> None:
-        """A screen that is opened after the data have come asks for its line now."""
-        if self.bench.workbench is not None:
-            self._ask_for_line(self.bench.workbench)
+    def on_screen_resume(self) -> None:
+        """Ask for the line of what was made ready meanwhile; nothing is estimated for a screen that nobody looks at."""
+        workbench = self.bench.workbench
+        if workbench is not None and workbench is not self._asked_of:
+            self._ask_for_line(workbench)
+
+    def slots(self) -> Sequence[Slot[Any, Any]]:
+        """Preparing a line, the full effect, another rule's width."""
+        return (self._prepare, self._sweeping, self._effect, self.best_slot)
 
     # ---- what is there ----------------------------------------------------------------------------------------
 
@@ -100,7 +110,8 @@ class EffectScreen(EffectKeys):
 
     def on_workbench_ready(self, message: WorkbenchReady) -> None:
         """The data are there, or the study has changed: prepare the line again."""
-        self._ask_for_line(message.workbench)
+        if self.bench.current_mode == self.place:
+            self._ask_for_line(message.workbench)
 
     def on_study_edited(self, message: StudyEdited) -> None:
         """What stands on screen is another study's until the work is done."""
@@ -123,7 +134,9 @@ class EffectScreen(EffectKeys):
         if desk is None or not self.outcome:
             return
         self.width = desk.view.widths.get(self.outcome)
+        self._asked_of = workbench
         self._effect.forget()
+        self._sweeping.forget()
         self._prepare.supersede(Asked(workbench=workbench, outcome=self.outcome, width=self.width))
         self._refresh_words()
 
@@ -151,7 +164,18 @@ class EffectScreen(EffectKeys):
             await self.query_one("#side").mount(AnswerTable(id="answers"), before="#choices")
         self.refresh_view()
         self.refresh_keys()
-        self._draw_sweep()
+        if self.prepared is not None:
+            self._sweeping.supersede(self.prepared)
+
+    def _show_sweep(self, prepared: Prepared, swept: Sweep) -> None:
+        if prepared is self.prepared:
+            self.swept = swept
+            self._draw_sweep()
+
+    def _sweep_failed(self, prepared: Prepared, error: Exception) -> None:
+        """The effect stands without its sweep; a fault is recorded all the same."""
+        if not hasattr(error, "sentence"):
+            self.bench.record_failure("sweeping the width", error)
 
     def _failed(self, asked: Asked, error: Exception) -> None:
         """A width or a study that gives no estimate says why; anything else is the program's fault and is recorded."""
@@ -251,10 +275,10 @@ class EffectScreen(EffectKeys):
         draw_here(self._sweep(), standing.effect)
 
     def _draw_sweep(self) -> None:
-        if self.prepared is not None and self.query("#sweep"):
+        if self.prepared is not None and self.swept is not None and self.query("#sweep"):
             from tui.screens.effect_work import draw_sweep
 
-            draw_sweep(self._sweep(), self.prepared)
+            draw_sweep(self._sweep(), self.prepared, self.swept)
             self._draw_here()
 
     def _chart(self) -> EffectChart:
@@ -289,6 +313,7 @@ class EffectScreen(EffectKeys):
     def _read_now(self, prepared: Prepared) -> None:
         """The cheap part, in the key handler: under a millisecond whatever the rows, where sums are kept."""
         if not prepared.at_once:
+            self._echo(prepared)
             return
         from estimation.errors import CannotEstimate
 
@@ -300,6 +325,13 @@ class EffectScreen(EffectKeys):
         own = max(prepared.own.below, prepared.own.above)
         self.standing = Standing(effect=effect, own=self.width is None, own_width=own, pending=True)
         self.refresh_view()
+
+    def _echo(self, prepared: Prepared) -> None:
+        """Where a reading takes a moment: say at once which width it will be of."""
+        if self.standing is not None:
+            width = self.width if self.width is not None else max(prepared.own.below, prepared.own.above)
+            self.standing = replace(self.standing, going_to=width, pending=True)
+            self._refresh_words()
 
     def _show_found(self, asked: Asked, found: Found) -> None:
         prepared = self.prepared
@@ -337,6 +369,12 @@ def _prepare(asked: Asked, should_stop: Callable[[], bool]) -> Prepared:
     from tui.screens.effect_work import prepare
 
     return prepare(asked, should_stop)
+
+
+def _sweep_of(prepared: Prepared, should_stop: Callable[[], bool]) -> Sweep:
+    from tui.screens.effect_work import sweep
+
+    return sweep(prepared, should_stop)
 
 
 def _find(asked: Asked, should_stop: Callable[[], bool]) -> Found:

@@ -11,6 +11,7 @@ from tui.screens.widths import COARSE, next_width, round_width
 from tui.slot import Slot
 
 if TYPE_CHECKING:
+    from estimation.line import Sweep
     from tui.screens.effect_words import Standing
     from tui.screens.effect_work import Asked, Found, Prepared
 
@@ -22,6 +23,8 @@ class EffectKeys(Room):
     ----------
     prepared
         The line of the outcome that is looked at, once it is there.
+    swept
+        Its effect against the width, once that is there.
     width
         Where the person stands; None at the study's own width.
     reach
@@ -35,6 +38,7 @@ class EffectKeys(Room):
     """
 
     prepared: Prepared | None = None
+    swept: Sweep | None = None
     width: float | None = None
     reach: float | None = None
     seen: list[Found]
@@ -204,7 +208,7 @@ class EffectKeys(Room):
         from tui.screens.effect_pages import numbers_page
 
         assert self.prepared is not None and self.reach is not None
-        self.bench.push_screen(numbers_page(self.prepared, self.reach))
+        self.bench.push_screen(numbers_page(self.prepared, self.reach, self.swept))
 
     def do_seen(self) -> None:
         """Key l."""

@@ -9,6 +9,7 @@ from textual import on
 from textual.binding import Binding, BindingType
 from textual.widget import Widget
 
+from estimation.line import Sweep
 from study.document import Study
 from study.options import BY_NAME, option_named
 from study.wording import figure, percent, width_text
@@ -141,9 +142,10 @@ def _value_of(name: str, value: Value) -> object:
     return value
 
 
-def numbers_page(prepared: Prepared, reach: float) -> TablePage:
-    """The numbers behind both pictures; Tab goes from one to the other."""
-    return TablePage([_means(prepared, reach), _sweep(prepared)])
+def numbers_page(prepared: Prepared, reach: float, swept: Sweep | None) -> TablePage:
+    """The numbers behind both pictures, the sweep's once it is there; Tab goes from one to the other."""
+    tables = [_means(prepared, reach)]
+    return TablePage(tables if swept is None else [*tables, _sweep(prepared, swept)])
 
 
 def _means(prepared: Prepared, reach: float) -> Numbers:
@@ -175,8 +177,8 @@ def _means(prepared: Prepared, reach: float) -> Numbers:
     return Numbers(title=f"Means of {prepared.outcome} around the line", columns=columns, rows=rows)
 
 
-def _sweep(prepared: Prepared) -> Numbers:
-    sweep, choices = prepared.sweep, prepared.workbench.study.estimate
+def _sweep(prepared: Prepared, sweep: Sweep) -> Numbers:
+    choices = prepared.workbench.study.estimate
     scale = 100.0 if prepared.effect.binary else 1.0
     rows = []
     for i in range(len(sweep.bandwidth)):

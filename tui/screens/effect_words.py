@@ -38,12 +38,15 @@ class Standing:
         The study's own width, the wider of the two sides.
     pending
         Whether the slow part (randomisation, notes) is still that of another width.
+    going_to
+        The width that was asked for and whose reading takes a moment; None when the reading is there.
     """
 
     effect: Effect
     own: bool
     own_width: float
     pending: bool
+    going_to: float | None = None
 
 
 def headline_lines(standing: Standing, width: int) -> list[Line]:
@@ -70,6 +73,8 @@ def _mark(standing: Standing) -> str:
     """Whether we stand where the study stands, in words."""
     from study.wording import width_text
 
+    if standing.going_to is not None:
+        return f"going to {width_text(standing.going_to)} ..."
     if standing.own:
         rule = _RULES.get(standing.effect.bandwidths.rule, "")
         return "the study's own width" + (f" ({rule})" if rule else "")

@@ -1,4 +1,4 @@
-"""The Effect screen's questions to the workbench, and its pictures. Imports numpy: only loaded once the data are there."""
+"""The Effect screen's questions to the workbench, and its pictures. Loaded once the data are there."""
 
 from __future__ import annotations
 
@@ -7,8 +7,7 @@ from dataclasses import dataclass, replace
 from time import perf_counter
 from typing import Final
 
-import numpy as np
-
+from estimation.arrays import Vector
 from estimation.effect import Effect
 from estimation.line import BinSide, CurveSide, Sweep, leading_interval
 from estimation.line_fit import Bandwidths
@@ -50,8 +49,8 @@ class Prepared:
         The study's own bandwidths.
     widest, narrowest
         Between what the arrow keys move, in units of the score.
-    sweep
-        The effect against the width.
+    grid
+        Widths at which the sweep looks.
     effect
         The full effect where the person stands; a reading at another width is put into its place.
     at_once
@@ -63,7 +62,7 @@ class Prepared:
     own: Bandwidths
     widest: float
     narrowest: float
-    sweep: Sweep
+    grid: Vector
     effect: Effect
     at_once: bool
     width: float | None
@@ -92,7 +91,7 @@ class Prepared:
 
 
 def prepare(asked: Asked, should_stop: Callable[[], bool]) -> Prepared:
-    """Sort, sum, choose, sweep: what may take a while with many rows, once for each outcome and kernel.
+    """Sort, sum, choose: what may take a while with many rows, once for each outcome and kernel.
 
     Raises
     ------
@@ -102,27 +101,27 @@ def prepare(asked: Asked, should_stop: Callable[[], bool]) -> Prepared:
     bench, outcome = asked.workbench, asked.outcome
     own = bench.chosen(outcome)
     effect = find(asked).effect
-    at = effect.bandwidths
     started = perf_counter()
-    bench.reading(outcome, at)
+    bench.reading(outcome, effect.bandwidths)
     took = perf_counter() - started
-    at_once = bench.quick(outcome) or took < _AT_ONCE_S
-    widest = bench.widest(outcome)
-    grid = bench.sweep_grid(outcome, _SWEEP_POINTS if bench.quick(outcome) else _SLOW_SWEEP_POINTS)
-    sweep = bench.sweep(outcome, grid, should_stop)
-    usable = np.flatnonzero(np.isfinite(sweep.estimate))
-    narrowest = float(grid[usable[0]]) if len(usable) else float(grid[0])
+    at_once = took < _AT_ONCE_S
+    grid = bench.sweep_grid(outcome, _SWEEP_POINTS if at_once else _SLOW_SWEEP_POINTS)
     return Prepared(
         workbench=bench,
         outcome=outcome,
         own=own,
-        widest=widest,
-        narrowest=min(narrowest, 0.2 * max(own.below, own.above)),
-        sweep=sweep,
+        widest=bench.widest(outcome),
+        narrowest=min(float(grid[0]), 0.2 * max(own.below, own.above)),
+        grid=grid,
         effect=effect,
         at_once=at_once,
         width=asked.width,
     )
+
+
+def sweep(prepared: Prepared, should_stop: Callable[[], bool]) -> Sweep:
+    """The effect against the width."""
+    return prepared.workbench.sweep(prepared.outcome, prepared.grid, should_stop)
 
 
 def find(asked: Asked) -> Found:
@@ -178,11 +177,10 @@ def _curve_in_per_cent(side: CurveSide) -> CurveSide:
     return replace(side, fit=100.0 * side.fit, low=100.0 * side.low, high=100.0 * side.high)
 
 
-def draw_sweep(chart: SweepChart, prepared: Prepared) -> None:
+def draw_sweep(chart: SweepChart, prepared: Prepared, swept: Sweep) -> None:
     """Draw the effect against the width, with a mark where the study's own width is."""
     scale = 100.0 if prepared.effect.binary else 1.0
-    sweep = prepared.sweep
-    drawn = replace(sweep, estimate=scale * sweep.estimate, low=scale * sweep.low, high=scale * sweep.high)
+    drawn = replace(swept, estimate=scale * swept.estimate, low=scale * swept.low, high=scale * swept.high)
     choices = prepared.workbench.study.estimate
     chart.set_data(sweep=drawn, label="effect by bandwidth", level=choices.level)
     chart.set_marks([(max(prepared.own.below, prepared.own.above), "study's own")])

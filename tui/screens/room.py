@@ -2,8 +2,8 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Iterator
-from typing import TYPE_CHECKING, ClassVar, cast
+from collections.abc import Callable, Iterator, Sequence
+from typing import TYPE_CHECKING, Any, ClassVar, cast
 
 from textual import events, on
 from textual.app import ComposeResult
@@ -18,6 +18,7 @@ from tui.keys import BY_NAME, PLACES, Key, Place, key_named, keys_of
 from tui.look import Ink
 from tui.safe import Entry
 from tui.screens.lines import Line, Lines, Part, wrapped
+from tui.slot import Slot
 from tui.widgets.cells import cell_width
 
 if TYPE_CHECKING:
@@ -67,6 +68,10 @@ class Room(Screen[None]):
     def copied(self) -> list[str]:
         """What `y` copies; the whole text unless a screen has something shorter to say."""
         return self.text()
+
+    def slots(self) -> Sequence[Slot[Any, Any]]:
+        """The slow work that the screen may have asked for."""
+        return ()
 
     # ---- shared -----------------------------------------------------------------------------------------------
 
@@ -138,6 +143,10 @@ class Room(Screen[None]):
     def tell(self, words: str, *, warning: bool = False) -> None:
         """Say something in the place of the keys, until the next key."""
         self.query_one(Foot).tell(words, warning=warning)
+
+    def hush(self) -> None:
+        """Show the keys again where something was said."""
+        self.query_one(Foot).hush()
 
     def change(self, changes: dict[str, object]) -> bool:
         """Change the study; what it refuses is told."""

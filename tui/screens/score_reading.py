@@ -138,7 +138,7 @@ class ScoreReading:
         # Every bar but the last is closed on the left and open on the right; a line that ties go below of opens the other way.
         at = np.searchsorted(self.score, edges, side="left")
         at[-1] = np.searchsorted(self.score, edges[-1], side="right")
-        at[edges == cutoff] = split
+        at[1:-1][edges[1:-1] == cutoff] = split
         return LineCounts(
             edges=edges,
             counts=np.diff(at).astype(np.int64),
