@@ -322,6 +322,13 @@ OPTIONS: Final[tuple[Option, ...]] = (
         help="Rows nearer to the line than this are left out.",
     ),
     Option(
+        section="estimate",
+        key="adjust",
+        kind="yes/no",
+        default=_DEFAULTS.adjust,
+        help="Let the covariates adjust the answer that leads; both are reported anyway.",
+    ),
+    Option(
         section="guard",
         key="profile",
         kind="word",

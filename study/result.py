@@ -180,6 +180,11 @@ def effect_document(effect: Effect) -> dict[str, Any]:
             for row in effect.curvature_table
         ],
         "breakdown_curvature": number(effect.breakdown),
+        **(
+            {"breakdown_curvature_reason": effect.reading.bias_aware_reason}
+            if effect.breakdown is None
+            else {}
+        ),
         "notes": [note.sentence for note in effect.notes],
     }
     if effect.reading.intention is not None:

@@ -299,6 +299,22 @@ def answers_table(effect: Effect) -> tuple[AnswerRow, ...]:
             effect.randomisation_reason,
         )
     )
+    if effect.lead == "anderson-rubin" and reading.take_up is not None:
+        pieces = reading.take_up.anderson_rubin
+        low, high = effect.leading
+        rows.append(
+            AnswerRow(
+                name="Anderson–Rubin",
+                basis="ratios that both jumps allow: "
+                + pieces_text(pieces, scale, scale * reading.std_error),
+                estimate=figure(scale * reading.estimate, scale * reading.std_error, sign=True),
+                low=figure(scale * low, scale * reading.std_error) if len(pieces) == 1 else "",
+                high=figure(scale * high, scale * reading.std_error) if len(pieces) == 1 else "",
+                numbers=(scale * reading.estimate, scale * low, scale * high),
+                reason=None,
+                leads=True,
+            )
+        )
     if effect.lead == "plain":
         rows.append(
             _row(
