@@ -6,6 +6,7 @@ from pathlib import Path
 
 import numpy as np
 from golden import screen_strips
+from textual import events
 from textual.pilot import Pilot
 
 from tui.app import CutbankApp, desk_for
@@ -75,26 +76,31 @@ async def settled(pilot: Pilot[int]) -> None:
         await app.settle()
 
 
+_NAMES = {
+    " ": "space",
+    ".": "full_stop",
+    ",": "comma",
+    ">": "greater_than_sign",
+    "=": "equals_sign",
+    "-": "minus",
+}
+
+
 async def press(pilot: Pilot[int], *keys: str) -> None:
     """Press keys one by one, each time waiting for what it sets off."""
     for key in keys:
-        await pilot.press(key)
+        pilot.app.post_message(events.Key(key, key if len(key) == 1 else None))
         await settled(pilot)
 
 
-async def type_text(pilot: Pilot[int], text: str, *, over: int = 0) -> None:
-    """Type text into a field, after taking away what stands there; then Enter."""
-    names = {
-        " ": "space",
-        ".": "full_stop",
-        ">": "greater_than_sign",
-        "=": "equals_sign",
-        "-": "minus",
-        "_": "underscore",
-    }
-    await pilot.press(*["backspace"] * over, *[names.get(letter, letter) for letter in text])
+async def type_text(pilot: Pilot[int], text: str, *, enter: bool = True) -> None:
+    """Type text into a field, in place of what stands there; then Enter."""
+    await press(pilot, "ctrl+u")
+    for letter in text:
+        pilot.app.post_message(events.Key(_NAMES.get(letter, letter), letter))
     await settled(pilot)
-    await press(pilot, "enter")
+    if enter:
+        await press(pilot, "enter")
 
 
 def shown(pilot: Pilot[int]) -> str:

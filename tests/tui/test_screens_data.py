@@ -67,8 +67,7 @@ async def test_rows_are_counted_while_the_condition_is_typed(tmp_path: Path) -> 
     async with app.run_test(size=SIZE) as pilot:
         await settled(pilot)
         await press(pilot, "1", "r")
-        await pilot.press(*"home", "space", "greater_than_sign", "space", *"600")
-        await settled(pilot)
+        await type_text(pilot, "home > 600", enter=False)
         assert "Keeps 300 of 900 rows." in shown(pilot)
         await press(pilot, "enter")
         assert load_study(path).data.rows == "home > 600"
@@ -81,8 +80,7 @@ async def test_a_bad_condition_is_a_sentence_and_changes_nothing(tmp_path: Path)
     async with app.run_test(size=SIZE) as pilot:
         await settled(pilot)
         await press(pilot, "1", "r")
-        await pilot.press(*"hom", "space", "greater_than_sign", "space", *"600")
-        await settled(pilot)
+        await type_text(pilot, "hom > 600", enter=False)
         assert "Keeps" not in shown(pilot) and "hom" in shown(pilot)
         await press(pilot, "escape")
     assert load_study(path).data.rows is None
@@ -121,7 +119,7 @@ async def test_from_a_data_file_to_a_declared_study_by_keys_alone(tmp_path: Path
         assert "Next: set the cutoff on screen 2." in shown(pilot)
         await press(pilot, "2", "c")
         assert "This line is a proposal" in shown(pilot)
-        await type_text(pilot, "50", over=12)
+        await type_text(pilot, "50")
     study = load_study(tmp_path / "study.toml")
     assert (study.columns.score, study.columns.outcomes, study.assignment.cutoff) == (
         "need",

@@ -93,11 +93,11 @@ async def test_a_typed_width_and_its_refusals(tmp_path: Path) -> None:
     async with app.run_test(size=SIZE) as pilot:
         await settled(pilot)
         await press(pilot, "w")
-        await type_text(pilot, "-3", over=10)
+        await type_text(pilot, "-3")
         assert "“-3” is not a width" in shown(pilot)
-        await type_text(pilot, "400", over=4)
+        await type_text(pilot, "400")
         assert "No score is that far from the line: the farthest is 50 away." in shown(pilot)
-        await type_text(pilot, "12,5", over=4)
+        await type_text(pilot, "12,5")
         assert headline(path, 12.5) in shown(pilot) and "within 12.5" in shown(pilot)
 
 
@@ -107,7 +107,7 @@ async def test_a_width_too_narrow_to_fit_says_so_and_stays_usable(tmp_path: Path
     async with app.run_test(size=SIZE) as pilot:
         await settled(pilot)
         await press(pilot, "w")
-        await type_text(pilot, "0.5", over=10)
+        await type_text(pilot, "0.5")
         assert "distinct score" in shown(pilot)
         await press(pilot, "escape")
         assert headline(path) in shown(pilot)
@@ -150,7 +150,7 @@ async def test_the_donut_is_typed_and_leaves_rows_out(tmp_path: Path) -> None:
     async with app.run_test(size=SIZE) as pilot:
         await settled(pilot)
         await press(pilot, "d")
-        await type_text(pilot, "1.5", over=3)
+        await type_text(pilot, "1.5")
         assert load_study(path).estimate.donut == 1.5
         assert "donut 1.5" in shown(pilot) and headline(path) in shown(pilot)
 
