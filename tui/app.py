@@ -19,23 +19,20 @@ from textual.binding import Binding, BindingType
 from textual.message import Message
 from textual.timer import Timer
 
-from study.document import Study, load_study, new_study
+from study.document import Study
 from study.errors import StudyError
-from study.literal import clean
 from study.readiness import missing_parts
+from tui.everywhere import EverywhereApp
 from tui.failures import write_failure
-from tui.keys import BY_NAME
 from tui.lock import BEAT_S
 from tui.look import THEME_NAMES, Ink, Look, detect_look
-from tui.memory import remember_study, state_folder
-from tui.safe import SafeApp
+from tui.memory import remember_study
+from tui.opening import bare_folder, desk_for, first_place
 from tui.screens.assignment import AssignmentScreen
 from tui.screens.awaiting import CompareScreen, DoubtsScreen, ReleaseScreen
 from tui.screens.data import DataScreen
 from tui.screens.effect import EffectScreen
-from tui.screens.finder import Finder
 from tui.screens.lines import Part
-from tui.screens.pages import HelpPage, TextPage, titled
 from tui.screens.room import Room
 from tui.slot import Slot
 from tui.state import Desk, StudyEdited, StudySaved, WorkbenchFailed, WorkbenchReady
@@ -54,7 +51,7 @@ _ROOMS: dict[str, Callable[[], Room]] = {
 _VIEW_RESTS_S = 1.0  # after the last key, the view is written down
 
 
-class CutbankApp(SafeApp[int]):
+class CutbankApp(EverywhereApp):
     """The bench.
 
     Parameters
@@ -353,9 +350,10 @@ class CutbankApp(SafeApp[int]):
         desk = self.desk
         if desk is None:
             return []
-        parts: list[Part] = [("unsealed", Ink.MUTED)]
-        if self.progress:
-            parts.insert(0, (f"{self.progress} ...  ", Ink.ACCENT))
+        # In the place of the plan's state, not beside it: a title that shrinks and grows with every read would flicker.
+        parts: list[Part] = [
+            (f"{self.progress} ...", Ink.ACCENT) if self.progress else ("unsealed", Ink.MUTED)
+        ]
         if desk.why_read_only:
             parts.append(("  read only", Ink.WARNING))
         elif desk.problem:
@@ -365,67 +363,6 @@ class CutbankApp(SafeApp[int]):
         else:
             parts.append(("  saved" if desk.is_saved else "  saving", Ink.MUTED))
         return parts
-
-    # ---- keys that work everywhere ------------------------------------------------------------------------------
-
-    def do_help(self) -> None:
-        """Key ?."""
-        if self.room is not None:
-            self.push_screen(HelpPage(self.room))
-
-    def do_find(self) -> None:
-        """Key F2."""
-        if self.room is not None:
-            self.push_screen(Finder(self.room))
-
-    def do_text(self) -> None:
-        """Key v."""
-        if self.room is not None:
-            self.push_screen(TextPage(f"{self.room.about.title} as text", self.room.text()))
-
-    def do_copy(self) -> None:
-        """Key y: to a file beside the person's other state, and to the terminal's clipboard if it takes that."""
-        room = self.room
-        if room is None:
-            return
-        lines = room.copied()
-        if not any(line.strip() for line in lines):
-            self.tell("There is nothing to copy here yet.")
-            return
-        title = self.desk.study.title if self.desk is not None else ""
-        text = "\n".join(clean(line) for line in titled(title or "Cutbank", lines))
-        path = state_folder() / "copied.txt"
-        try:
-            from study.saving import write_whole
-
-            path.parent.mkdir(parents=True, exist_ok=True, mode=0o700)
-            write_whole(path, text.encode())
-        except (OSError, StudyError):
-            self.tell("Sent to the terminal's clipboard; no file could be written.", warning=True)
-        else:
-            self.tell(f"Sent to the terminal's clipboard; also in {path}.")
-        if not os.environ.get("CUTBANK_NO_CLIPBOARD"):
-            self.copy_to_clipboard(text)
-
-    def do_looks(self) -> None:
-        """Key F3."""
-        here = THEME_NAMES.index(self.look.theme) if self.look.theme in THEME_NAMES else 0
-        name = THEME_NAMES[(here + 1) % len(THEME_NAMES)]
-        self.set_look(replace(self.look, theme=name))
-        if self.desk is not None:
-            self.desk.view = replace(self.desk.view, colours=name)
-            self.view_moved()
-        self.action_redraw()
-        self._refresh_room()
-        self.tell(f"Colours: {name.removeprefix('cutbank-')}.")
-
-    def do_redraw(self) -> None:
-        """Key F5."""
-        self.action_redraw()
-
-    def do_quit(self) -> None:
-        """Key q."""
-        self.leave(0)
 
     # ---- safety -----------------------------------------------------------------------------------------------
 
@@ -442,41 +379,6 @@ class CutbankApp(SafeApp[int]):
         if error is not None:
             self.record_failure("running", error)
         return self._failure_log
-
-
-def first_place(desk: Desk | None) -> str:
-    """The screen to begin on: where the person stood, else the effect when there is one to see, else the data."""
-    if desk is None:
-        return "data"
-    if desk.view.screen in BY_NAME:
-        return desk.view.screen
-    return "data" if missing_parts(desk.study) else "effect"
-
-
-def desk_for(path: Path) -> Desk:
-    """The desk of a study file, of a folder with a study.toml, or of a data file.
-
-    A data file gets the study that lies beside it, or a new one that is written with its first change.
-
-    Raises
-    ------
-    StudyError
-        When there is no such file, or it can't be read as a study.
-    """
-    if path.is_dir() and (path / "study.toml").is_file():
-        path = path / "study.toml"
-    if path.suffix.lower() == ".toml" or path.is_dir():
-        return Desk(load_study(path))
-    if not path.is_file():
-        raise StudyError(f"{path}: there is no such file.", "Check the name.", 3)
-    beside = path.with_name("study.toml")
-    own = path.with_name(f"{path.stem}.study.toml")
-    for candidate in (beside, own):
-        if candidate.is_file():
-            study = load_study(candidate)
-            if study.data_file.resolve() == path.resolve():
-                return Desk(study)
-    return Desk(new_study(path, own if beside.exists() else beside))
 
 
 def run(study_path: Path | None, *, mouse: bool = False, ascii_only: bool = False) -> int:
@@ -500,7 +402,7 @@ def run(study_path: Path | None, *, mouse: bool = False, ascii_only: bool = Fals
 
     # A process can't be spawned while the screen has taken stderr over, unless this runs already.
     resource_tracker.ensure_running()
-    browse_from = study_path if study_path is not None and _bare_folder(study_path) else None
+    browse_from = study_path if study_path is not None and bare_folder(study_path) else None
     desk = None if study_path is None or browse_from is not None else desk_for(study_path)
     chosen = desk.view.colours if desk is not None and desk.view.colours in THEME_NAMES else None
     look = detect_look(os.environ, theme=chosen, ascii_only=ascii_only)
@@ -516,7 +418,3 @@ def run(study_path: Path | None, *, mouse: bool = False, ascii_only: bool = Fals
     if app.return_code:
         return app.return_code
     return status or 0
-
-
-def _bare_folder(path: Path) -> bool:
-    return path.is_dir() and not (path / "study.toml").is_file()

@@ -9,8 +9,9 @@ from golden import screen_strips
 from textual import events
 from textual.pilot import Pilot
 
-from tui.app import CutbankApp, desk_for
+from tui.app import CutbankApp
 from tui.look import Look
+from tui.opening import desk_for
 
 ROWS = 900
 CUTOFF = 50.0

@@ -14,9 +14,10 @@ from pty_harness import Terminal
 
 from study.document import load_study
 from study.errors import StudyError
-from tui.app import CutbankApp, desk_for, first_place
+from tui.app import CutbankApp
 from tui.look import DARK, LIGHT, Look
 from tui.memory import load_view
+from tui.opening import desk_for, first_place
 from tui.screens.effect import EffectScreen
 
 SIZE = (80, 24)
@@ -40,7 +41,8 @@ def test_a_first_screen_is_drawn_before_anything_heavy_is_loaded(tmp_path: Path,
         "import asyncio, sys\n"
         "from dataclasses import replace\n"
         "from pathlib import Path\n"
-        "from tui.app import CutbankApp, desk_for\n"
+        "from tui.app import CutbankApp\n"
+        "from tui.opening import desk_for\n"
         f"desk = desk_for(Path({str(path)!r}))\n"
         f"desk.view = replace(desk.view, screen={place!r})\n"
         "class First(CutbankApp):\n"

@@ -252,7 +252,7 @@ class EffectScreen(EffectKeys):
             return " ".join(self.bench.trouble)
         if self._problem:
             return self._problem
-        return f"Reading {self.bench.data_name()} ..."
+        return f"Reading {self.bench.data_name()} ..." if self.bench.workbench is None else "Estimating ..."
 
     def _draw_chart(self) -> None:
         standing, prepared = self.standing, self.prepared
