@@ -29,7 +29,7 @@ from estimation.arrays import Mask, Matrix, Vector
 LISTED_UP_TO: Final = 20_000
 # Rows beyond which the normal law replaces draws: there the two agree to well under a draw's own error.
 DRAWN_UP_TO: Final = 2_000
-_CHUNK: Final = 2_000_000  # random keys held at once
+_CHUNK: Final = 400_000  # random keys held at once
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
