@@ -120,7 +120,7 @@ class Ladder:
         degree = len(COEFFICIENTS[kernel]) - 1
         # A bias-corrected fit needs 2(p + 1) powers and twice the kernel's own, the bandwidth rule a global
         # fit of order p + 2, the rule-of-thumb curvature a global quartic.
-        powers = 1 + max(2 * (order + 1) + 2 * degree, 2 * (order + 2), 8)
+        powers = 1 + max(2 * (order + 1) + 2 * degree, 2 * (order + 2) + 1, 8)
         nearest = np.concatenate((sample.below.values[:4096], sample.above.values[:4096]))
         centre = nearest.mean(axis=0)
 
