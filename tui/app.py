@@ -36,6 +36,7 @@ from tui.screens.lines import Part
 from tui.screens.room import Room
 from tui.slot import Slot
 from tui.state import Desk, StudyEdited, StudySaved, WorkbenchFailed, WorkbenchReady
+from tui.walk import walk_is_due
 
 if TYPE_CHECKING:
     from study.analysis import Workbench
@@ -410,6 +411,7 @@ def run(study_path: Path | None, *, mouse: bool = False, ascii_only: bool = Fals
         remember_study(desk.study.path)
     app = CutbankApp(desk, look=look)
     app.browse_from = browse_from
+    app.hint = 0 if desk is not None and walk_is_due() else None
     try:
         status = App.run(app, mouse=mouse)
     finally:

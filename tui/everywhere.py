@@ -16,6 +16,7 @@ from tui.screens.finder import Finder
 from tui.screens.pages import HelpPage, TextPage, titled
 from tui.screens.room import Room
 from tui.state import Desk
+from tui.walk import HINTS, end_walk
 
 
 class EverywhereApp(SafeApp[int]):
@@ -25,9 +26,12 @@ class EverywhereApp(SafeApp[int]):
     ----------
     desk
         The study on the desk, None before one is opened.
+    hint
+        Which of the hints for a first run is shown, None for none.
     """
 
     desk: Desk | None
+    hint: int | None = None
 
     @property
     def room(self) -> Room | None:
@@ -95,6 +99,21 @@ class EverywhereApp(SafeApp[int]):
         if self.room is not None:
             self.room.refresh_all()
         self.tell(f"Colours: {name.removeprefix('cutbank-')}.")
+
+    def do_next_hint(self) -> None:
+        """Key F4: the hints can be called again when they are gone."""
+        self.hint = 0 if self.hint is None else self.hint + 1
+        if self.hint >= len(HINTS):
+            self.do_end_hints()
+        elif self.room is not None:
+            self.room.refresh_keys()
+
+    def do_end_hints(self) -> None:
+        """Key F6."""
+        self.hint = None
+        end_walk()
+        if self.room is not None:
+            self.room.refresh_keys()
 
     def do_redraw(self) -> None:
         """Key F5."""

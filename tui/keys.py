@@ -87,6 +87,8 @@ EVERYWHERE: Final[tuple[Key, ...]] = (
     _key("everywhere.text", "v", "v", "as text", "This screen as plain text, for a screen reader or for selecting.", footer=False),
     _key("everywhere.find", "f2", "F2", "find", "Find any action by name.", footer=False),
     _key("everywhere.looks", "f3", "F3", "colours", "Change between dark, light and the terminal's own colours.", footer=False),
+    _key("everywhere.next_hint", "f4", "F4", "next hint", "The next of the five hints for a first run.", footer=False),
+    _key("everywhere.end_hints", "f6", "F6", "no more hints", "Take the hints away for good.", footer=False),
     _key("everywhere.redraw", "f5", "F5", "redraw", "Draw the whole screen again, after something else wrote on it.", footer=False),
     _key("everywhere.quit", "q", "q", "quit", "Leave; everything is saved already.", footer=True),
 )  # fmt: skip

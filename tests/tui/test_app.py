@@ -19,6 +19,7 @@ from tui.look import DARK, LIGHT, Look
 from tui.memory import load_view
 from tui.opening import desk_for, first_place
 from tui.screens.effect import EffectScreen
+from tui.walk import HINTS, walk_is_due
 
 SIZE = (80, 24)
 ROOT = Path(__file__).resolve().parents[2]
@@ -180,6 +181,29 @@ async def test_every_screen_without_colour_and_in_ascii(tmp_path: Path, look: Lo
             if look.ascii_only:
                 assert text.isascii(), sorted({letter for letter in text if not letter.isascii()})
         await press(pilot, "1", "question_mark")
+
+
+async def test_the_hints_of_a_first_run_are_walked_through_and_stay_away(tmp_path: Path) -> None:
+    assert walk_is_due()
+    app = bench(make_study(tmp_path))
+    app.hint = 0
+    async with app.run_test(size=SIZE) as pilot:
+        await settled(pilot)
+        for number, hint in enumerate(HINTS, 1):
+            said = " ".join(shown(pilot).split())
+            assert f"{hint} Hint {number} of 5 F4 next F6 no more hints" in said
+            await press(pilot, "right", "f4")
+        assert "Hint" not in shown(pilot)
+    assert not walk_is_due()
+
+
+async def test_the_hints_can_be_sent_away_at_once(tmp_path: Path) -> None:
+    app = bench(make_study(tmp_path))
+    app.hint = 0
+    async with app.run_test(size=SIZE) as pilot:
+        await settled(pilot)
+        await press(pilot, "f6")
+        assert "Hint" not in shown(pilot) and not walk_is_due()
 
 
 async def test_control_c_says_how_to_leave_and_does_not(tmp_path: Path) -> None:

@@ -45,14 +45,15 @@ class EffectScreen(EffectKeys):
     place = "effect"
     BINDINGS: ClassVar[list[BindingType]] = [*bindings_of("effect")]
     DEFAULT_CSS = """
-    EffectScreen #headline { margin-bottom: 1; }
-    EffectScreen.low #headline { margin-bottom: 0; }
+    EffectScreen #headline { margin: 1 0; }
+    EffectScreen.low #headline { margin: 0; }
     EffectScreen #work { height: 1fr; layout: vertical; }
     EffectScreen #pictures { height: 1fr; width: 1fr; }
     EffectScreen #side { height: auto; width: 1fr; }
-    EffectScreen EffectChart { height: 3fr; min-height: 6; }
-    EffectScreen SweepChart { height: 2fr; min-height: 6; }
-    EffectScreen.low SweepChart { height: 6; }
+    EffectScreen EffectChart { height: 3fr; min-height: 6; margin-bottom: 1; }
+    EffectScreen SweepChart { height: 2fr; min-height: 6; margin-bottom: 1; }
+    EffectScreen.low EffectChart { margin-bottom: 0; }
+    EffectScreen.low SweepChart { height: 6; margin-bottom: 0; }
     EffectScreen #why { margin-top: 1; }
     EffectScreen.low #why { display: none; }
     EffectScreen.compact SweepChart { display: none; }

@@ -16,7 +16,7 @@ from study.wording import figure, percent, width_text
 from tui.look import Ink
 from tui.screens.effect_words import headline_lines
 from tui.screens.effect_work import Found, Prepared
-from tui.screens.lines import Lines
+from tui.screens.lines import Lines, wrapped
 from tui.screens.pages import Numbers, Page, TablePage
 from tui.widgets.form import Choice, ChoiceForm, Value
 from tui.widgets.table import Column
@@ -45,6 +45,7 @@ class ChoicesPage(Page):
     AUTO_FOCUS = "ChoiceForm"
     DEFAULT_CSS = """
     ChoicesPage #effect { margin-bottom: 1; }
+    ChoicesPage #explain { margin-bottom: 1; }
     """
     leave_keys = (("↑↓", "line"), ("←→", "change"), ("type", "a number"), ("u", "undo"), ("Esc", "back"))
     BINDINGS: ClassVar[list[BindingType]] = [
@@ -60,11 +61,13 @@ class ChoicesPage(Page):
         """The effect, then the form."""
         yield Lines(id="effect")
         yield ChoiceForm(id="form")
+        yield Lines(id="explain")
 
     def on_mount(self) -> None:
         """Fill the form, and follow the effect."""
         self._room.on_words = self.follow
         self.follow()
+        self.explain()
 
     def on_unmount(self) -> None:
         """Stop following."""
@@ -82,6 +85,15 @@ class ChoicesPage(Page):
         self.query_one(ChoiceForm).set_choices(
             [_choice(desk.study, name, why_not) for name in _LABELS if name in BY_NAME]
         )
+
+    @on(ChoiceForm.RowHighlighted)
+    def explain(self) -> None:
+        """Say below the form what the line under the cursor takes, whole."""
+        names = [name for name in _LABELS if name in BY_NAME]
+        option = BY_NAME[names[self.query_one(ChoiceForm).cursor]]
+        width = max(20, self.size.width - 2)
+        lines = [*wrapped(option.help, width), *wrapped(f"Takes {option.expected}.", width)]
+        self.query_one("#explain", Lines).show([[(line, Ink.MUTED)] for line in lines])
 
     @on(ChoiceForm.ChoiceEdited)
     def _edited(self, event: ChoiceForm.ChoiceEdited) -> None:

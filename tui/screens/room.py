@@ -19,6 +19,7 @@ from tui.look import Ink
 from tui.safe import Entry
 from tui.screens.lines import Line, Lines, Part, wrapped
 from tui.slot import Slot
+from tui.walk import HINTS
 from tui.widgets.cells import cell_width
 
 if TYPE_CHECKING:
@@ -217,7 +218,8 @@ class Foot(Vertical):
         """Show the keys of a room, unless something else is being said."""
         self._room = room
         if not self.asking and not self._told:
-            self.query_one("#said", Lines).show([keys_line(room, self._width())])
+            lines = [*hint_lines(room, self._width()), keys_line(room, self._width())]
+            self.query_one("#said", Lines).show(lines)
 
     def tell(self, words: str, *, warning: bool = False) -> None:
         """Say something until the next key."""
@@ -296,6 +298,23 @@ class Foot(Vertical):
 
     def _width(self) -> int:
         return max(20, self.screen.size.width - 2)
+
+
+def hint_lines(room: Room, width: int) -> list[Line]:
+    """The hint for a first run that is due, and the keys that move on; [] for none."""
+    hint = room.bench.hint
+    if hint is None:
+        return []
+    first = f"Hint {hint + 1} of {len(HINTS)}"
+    lines = [[(line, Ink.STRONG)] for line in wrapped(HINTS[hint], width)]
+    keys: Line = [
+        (f"{first}  ", Ink.MUTED),
+        ("F4", Ink.ACCENT),
+        (" next  ", Ink.MUTED),
+        ("F6", Ink.ACCENT),
+        (" no more hints", Ink.MUTED),
+    ]
+    return [*lines, keys]
 
 
 def keys_line(room: Room, width: int) -> Line:
