@@ -88,7 +88,7 @@ def dense_rule(
 
 
 @pytest.mark.parametrize("name", ["triangular", "uniform", "epanechnikov"])
-@pytest.mark.parametrize("order", [0, 1, 2])
+@pytest.mark.parametrize("order", [0, 1, 2, 3])
 @pytest.mark.parametrize("treated", ["above", "below"])
 def test_the_mse_rule_is_the_three_steps(name: str, order: int, treated: str) -> None:
     rng = np.random.default_rng(30 + order)
