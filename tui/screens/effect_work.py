@@ -3,13 +3,13 @@
 from __future__ import annotations
 
 from collections.abc import Callable
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, field, replace
 from time import perf_counter
 from typing import Final
 
 from estimation.arrays import Vector
 from estimation.effect import Effect
-from estimation.line import BinSide, CurveSide, Sweep, leading_interval
+from estimation.line import Bins, BinSide, CurveSide, Sweep, leading_interval
 from estimation.line_fit import Bandwidths
 from study.analysis import Workbench
 from study.document import edit
@@ -66,6 +66,13 @@ class Prepared:
     effect: Effect
     at_once: bool
     width: float | None
+    _means: dict[tuple[float, int], Bins] = field(default_factory=dict, repr=False, compare=False)
+
+    def means(self, reach: float, count: int) -> Bins:
+        """Binned means, kept: a width that moves inside the picture does not change them."""
+        if (reach, count) not in self._means:
+            self._means[reach, count] = self.workbench.bins(self.outcome, reach, count)
+        return self._means[reach, count]
 
     @property
     def found(self) -> Found:
@@ -146,7 +153,7 @@ def draw_chart(chart: EffectChart, prepared: Prepared, at: Bandwidths, *, reach:
     """Draw means and fits around the line; an outcome of nought and one is drawn in per cent, as its words are."""
     bench, outcome = prepared.workbench, prepared.outcome
     count = max(8, min(40, (chart.size.width or 80) // 4))
-    bins = bench.bins(outcome, reach, count)
+    bins = prepared.means(reach, count)
     curve = bench.curve(outcome, at)
     curve = replace(curve, below=_ascending(curve.below))
     binary = prepared.effect.binary
