@@ -86,7 +86,8 @@ def coefficient(side: SideSums, *, bandwidth: float, kernel: str, order: int, po
         value = value + side.centre
     polynomial = np.convolve(weights, weights)
     squares = combine(raw, np.convolve(shape, shape), len(polynomial))[0, :, channels.spread]
-    variance = np.diagonal(channels.symmetric(polynomial @ squares))
+    # A sum of squares; where it is all but zero, rounding may leave it a shade below.
+    variance = np.maximum(np.diagonal(channels.symmetric(polynomial @ squares)), 0.0)
     next_moment = weights @ moments[0, order + 1 : 2 * order + 2, 0]
     scale = bandwidth**-power
     return Coefficient(
