@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import os
+import re
 from collections.abc import Iterable
 from dataclasses import replace
 
@@ -86,6 +87,20 @@ class EverywhereApp(SafeApp[int]):
             self.tell(f"Sent to the terminal's clipboard; also in {path}.")
         if not os.environ.get("CUTBANK_NO_CLIPBOARD"):
             self.copy_to_clipboard(text)
+
+    def do_picture(self) -> None:
+        """Key F9: the picture names no font on a network and holds what the screen shows, nothing more."""
+        path = state_folder() / "screen.svg"
+        picture = re.sub(
+            r"@font-face\s*\{[^}]*\}", "", self.export_screenshot(title="Cutbank", simplify=True)
+        )
+        try:
+            path.parent.mkdir(parents=True, exist_ok=True, mode=0o700)
+            write_whole(path, picture.replace("Fira Code", "DejaVu Sans Mono").encode())
+        except (OSError, StudyError):
+            self.tell("The picture could not be written to your state folder.", warning=True)
+        else:
+            self.tell(f"This screen is kept as a picture in {path}.")
 
     def do_looks(self) -> None:
         """Key F3."""

@@ -84,6 +84,7 @@ EVERYWHERE: Final[tuple[Key, ...]] = (
     _key("everywhere.undo", "u", "u", "undo", "Take back the last change of the study.", edits=True),
     _key("everywhere.redo", "U", "U", "redo", "Make the change again that was taken back.", footer=False, edits=True),
     _key("everywhere.copy", "y", "y", "copy", "Copy what this screen says to a file and to the terminal's clipboard.", footer=False),
+    _key("everywhere.picture", "f9", "F9", "picture", "Keep this screen as a picture (SVG) in a file.", footer=False),
     _key("everywhere.text", "v", "v", "as text", "This screen as plain text, for a screen reader or for selecting.", footer=False),
     _key("everywhere.find", "f2", "F2", "find", "Find any action by name.", footer=False),
     _key("everywhere.looks", "f3", "F3", "colours", "Change between dark, light and the terminal's own colours.", footer=False),
@@ -103,6 +104,7 @@ _DATA: Final[tuple[Key, ...]] = (
     _key("data.covariate", "a", "a", "covariate", "Make the column a covariate, measured before assignment, or no longer one.", edits=True),
     _key("data.none", "n", "n", "none", "Take every role away from the column.", edits=True),
     _key("data.rows", "r", "r", "rows", "Keep only rows that meet a condition, with a live count.", edits=True),
+    _key("data.details", "enter", "Enter", "values", "The column's spread and its value labels as a table.", footer=False),
     _key("data.open", "f", "f", "open", "Open a data file or another study."),
     _key("data.title", "e", "e", "title", "Name the study.", footer=False, edits=True),
 )  # fmt: skip
@@ -282,6 +284,21 @@ def key_list_markdown() -> str:
     lists = [f"| {_cell(shown)} | Move by {said}. |" for shown, said in IN_LISTS]
     parts.append("\n".join(["### In lists and tables", "", "| key | does |", "|---|---|", *lists]))
     return "\n\n".join(parts) + "\n"
+
+
+def with_key_list(text: str) -> str:
+    """A Markdown text with the key list put between its two marks, `<!-- keys -->` and `<!-- /keys -->`.
+
+    Raises
+    ------
+    ValueError
+        When a mark is missing.
+    """
+    before, first, rest = text.partition("<!-- keys -->")
+    _, last, after = rest.partition("<!-- /keys -->")
+    if not first or not last:
+        raise ValueError("the marks <!-- keys --> and <!-- /keys --> are not both there")
+    return f"{before}{first}\n{key_list_markdown()}{last}{after}"
 
 
 def _chapters() -> Iterator[tuple[str, tuple[Key, ...]]]:

@@ -5,6 +5,7 @@ No widget holds a part of the study. A screen posts an intent, the desk makes a 
 
 from __future__ import annotations
 
+import threading
 from collections.abc import Mapping
 from pathlib import Path
 from typing import TYPE_CHECKING
@@ -73,6 +74,7 @@ class Desk:
         self._past: list[Study] = []
         self._undone: list[Study] = []
         self._kept_view = self.view
+        self._one_at_a_time = threading.Lock()
         self._lock = Lock(study.path)
         self.holder: Holder | None = self._lock.take()
 
@@ -148,9 +150,12 @@ class Desk:
         StudyError
             When the file can't be written.
         """
-        if self.holder is None:
-            save_study(study)
-            self.saved = study
+        with (
+            self._one_at_a_time
+        ):  # closing waits for a save under way: else the older study would be written last
+            if self.holder is None:
+                save_study(study)
+                self.saved = study
 
     @property
     def is_saved(self) -> bool:

@@ -159,6 +159,18 @@ async def test_copying_writes_a_file_for_its_owner_and_says_where(tmp_path: Path
         assert app.clipboard == text
 
 
+async def test_a_picture_of_the_screen_needs_nothing_from_a_network(tmp_path: Path) -> None:
+    app = bench(make_study(tmp_path))
+    async with app.run_test(size=SIZE) as pilot:
+        await settled(pilot)
+        await press(pilot, "f9")
+        path = Path(os.environ["XDG_STATE_HOME"]) / "cutbank" / "screen.svg"
+        text = path.read_text()
+        assert "days" not in text and "light" in text and "Robust" in text
+        assert "@font-face" not in text and "url(http" not in text and "cdn" not in text.casefold()
+        assert stat.S_IMODE(path.stat().st_mode) == 0o600
+
+
 async def test_colours_go_round_and_are_remembered(tmp_path: Path) -> None:
     path = make_study(tmp_path)
     app = bench(path, look=Look(theme=DARK))

@@ -8,7 +8,16 @@ from collections import Counter
 import pytest
 
 from tui.app import _ROOMS, CutbankApp
-from tui.keys import EVERYWHERE, IN_LISTS, PLACES, bindings_of, key_list_markdown, key_named, keys_of
+from tui.keys import (
+    EVERYWHERE,
+    IN_LISTS,
+    PLACES,
+    bindings_of,
+    key_list_markdown,
+    key_named,
+    keys_of,
+    with_key_list,
+)
 
 ALLOWED = re.compile(r"[a-zA-Z0-9]|f\d{1,2}|left|right|up|down|enter|escape|tab|question_mark")
 
@@ -57,6 +66,17 @@ def test_the_readme_list_holds_every_key() -> None:
     for shown, _ in IN_LISTS:
         assert f"| {shown} |" in text
     assert all(line.count("|") == 3 for line in text.splitlines() if line.startswith("|"))
+
+
+def test_the_list_goes_between_its_marks_and_nowhere_else() -> None:
+    text = "above\n<!-- keys -->\nold\n<!-- /keys -->\nbelow\n"
+    once = with_key_list(text)
+    assert once.startswith("above\n<!-- keys -->\n### On every screen") and once.endswith(
+        "|\n<!-- /keys -->\nbelow\n"
+    )
+    assert "old" not in once and with_key_list(once) == once
+    with pytest.raises(ValueError, match="not both there"):
+        with_key_list("no marks")
 
 
 def test_an_unknown_key_is_an_error() -> None:

@@ -104,7 +104,8 @@ async def test_a_file_that_cannot_be_read_is_a_sentence(tmp_path: Path) -> None:
     async with app.run_test(size=SIZE) as pilot:
         await settled(pilot)
         await press(pilot, "1")
-        assert "homes.csv" in shown(pilot) and "no such" in shown(pilot)
+        said = " ".join(shown(pilot).split())
+        assert "homes.csv: there is no such" in said
         await press(pilot, "3")
         assert "homes.csv" in shown(pilot)
 
@@ -146,6 +147,18 @@ async def test_the_browser_lists_only_what_can_be_read_and_opens_it(tmp_path: Pa
         await press(pilot, "enter")
         assert app.desk is not None and app.desk.study.path == path
         assert "Lanterns in the lower town" in shown(pilot)
+
+
+async def test_a_columns_spread_is_a_table_whose_counts_are_its_rows(tmp_path: Path) -> None:
+    app = bench(make_study(tmp_path))
+    async with app.run_test(size=SIZE) as pilot:
+        await settled(pilot)
+        await press(pilot, "1", "down", "enter")
+        lines = shown(pilot).splitlines()
+        assert "Spread of need" in lines[0]
+        assert sum(int(line.split()[-1]) for line in lines[3:19]) == 882  # 900 less one in fifty
+        await press(pilot, "escape")
+        assert "lowest" in shown(pilot)
 
 
 def test_a_folder_that_cannot_be_looked_into_is_an_error_for_the_page(tmp_path: Path) -> None:

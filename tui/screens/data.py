@@ -17,6 +17,7 @@ from tui.keys import bindings_of
 from tui.look import Ink, Look
 from tui.screens.browse import Browse
 from tui.screens.lines import Line, Lines, wrapped
+from tui.screens.pages import Numbers, TablePage
 from tui.screens.roles import role_changes, role_label, role_of, why_not_role
 from tui.screens.room import Room
 from tui.slot import Slot
@@ -184,7 +185,7 @@ class DataScreen(Room):
         info = self._info()
         if info is None:
             return "The columns are not there yet"
-        if action == "rows":
+        if action in ("rows", "details"):
             return ""
         if action == "none":
             return "" if role_of(self.bench.desk.study.columns, info.name) else "This column has no role"
@@ -227,6 +228,16 @@ class DataScreen(Room):
     def do_none(self) -> None:
         """Key n."""
         self.give_role("")
+
+    @on(VTable.RowChosen)
+    def _row_chosen(self) -> None:
+        self.do_details()
+
+    def do_details(self) -> None:
+        """Key enter."""
+        info = self._info()
+        if info is not None:
+            self.bench.push_screen(TablePage(column_tables(info)))
 
     def do_open(self) -> None:
         """Key f."""
@@ -312,6 +323,29 @@ def spread(histogram: tuple[int, ...], cells: int, look: Look) -> str:
     """A histogram in so many cells."""
     each = max(1, len(histogram) // cells)
     return shape([sum(histogram[start : start + each]) for start in range(0, len(histogram), each)], look)
+
+
+def column_tables(info: ColumnInfo) -> list[Numbers]:
+    """A column's histogram, and its value labels where it has any."""
+    bars: list[tuple[str, str, str]] = []
+    low, high = info.low, info.high
+    if info.histogram and isinstance(low, int | float) and isinstance(high, int | float):
+        width = (high - low) / len(info.histogram)
+        bars = [
+            (f"{low + i * width:.6g}", f"{low + (i + 1) * width:.6g}", f"{count:,}")
+            for i, count in enumerate(info.histogram)
+        ]
+    columns = (
+        Column(key="from", title="from", align="decimal"),
+        Column(key="to", title="to", align="decimal"),
+        Column(key="rows", title="rows", align="right"),
+    )
+    empty = "This column has no range to divide."
+    tables = [Numbers(title=f"Spread of {info.name}", columns=columns, rows=bars, empty=empty)]
+    if info.labels:
+        named = (Column(key="value", title="value"), Column(key="label", title="label", widest=100))
+        tables.append(Numbers(title=f"Labels of {info.name}", columns=named, rows=list(info.labels.items())))
+    return tables
 
 
 def _about(info: ColumnInfo, rows: int) -> str:

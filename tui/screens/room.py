@@ -143,7 +143,7 @@ class Room(Screen[None]):
 
     def tell(self, words: str, *, warning: bool = False) -> None:
         """Say something in the place of the keys, until the next key."""
-        self.query_one(Foot).tell(words, warning=warning)
+        self.query_one(Foot).tell(words, warning)
 
     def hush(self) -> None:
         """Show the keys again where something was said."""
@@ -202,6 +202,7 @@ class Foot(Vertical):
         self._question = ""
         self._focus_before: Widget | None = None
         self._told = False
+        self._words = ("", False)
 
     def compose(self) -> ComposeResult:
         """Words above, the field below them, a hint under it."""
@@ -217,16 +218,22 @@ class Foot(Vertical):
     def show_keys(self, room: Room) -> None:
         """Show the keys of a room, unless something else is being said."""
         self._room = room
-        if not self.asking and not self._told:
+        if self._told:
+            self.tell(*self._words)  # wrapped anew: the terminal may have another width
+        elif not self.asking:
             lines = [*hint_lines(room, self._width()), keys_line(room, self._width())]
             self.query_one("#said", Lines).show(lines)
+            # What is said for a moment lies over the body; a hint stays, so the body makes room for it.
+            below = room.query_one("#room-for-foot")
+            if below.size.height != len(lines):
+                below.styles.height = len(lines)
 
-    def tell(self, words: str, *, warning: bool = False) -> None:
+    def tell(self, words: str, warning: bool = False) -> None:
         """Say something until the next key."""
         if self.asking:
             self.say_hint(words, warning=warning)
             return
-        self._told = True
+        self._told, self._words = True, (words, warning)
         ink = Ink.WARNING if warning else Ink.STRONG
         self.query_one("#said", Lines).show(
             [[(line, ink)] for line in wrapped(words.replace("\n", " "), self._width())]
