@@ -351,10 +351,11 @@ def choose_bandwidths(ladder: Ladder, spread: ScoreSpread, choices: Choices) -> 
         return _with_pilot(width, width, rule, ladder, spread, choices)
     found = [mse_widths(ladder, spread, order=order, variable=v) for v in range(ladder.targets)]
     factor = coverage_factor(spread.rows, order) if rule.startswith("coverage") else 1.0
+    limits = _limits(ladder, order, ladder.kernel)  # the factor must not push a width below what a fit needs
     if rule.endswith("per side"):
-        own = np.min([widths.own for widths in found], axis=0) * factor
+        own = limits.own(np.min([widths.own for widths in found], axis=0) * factor)
         return _with_pilot(float(own[0]), float(own[1]), rule, ladder, spread, choices)
-    common = min(widths.common for widths in found) * factor
+    common = limits.common(min(widths.common for widths in found) * factor)
     return _with_pilot(common, common, rule, ladder, spread, choices)
 
 

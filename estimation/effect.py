@@ -11,7 +11,7 @@ import numpy as np
 from estimation.bandwidth import coefficient
 from estimation.choices import Choices
 from estimation.errors import CannotEstimate
-from estimation.inference import HonestInterval, breakdown_curvature, honest_interval
+from estimation.inference import HonestInterval, breakdown_curvature, honest_interval, quantile
 from estimation.kernels import count_inside
 from estimation.line import Line
 from estimation.line_fit import Bandwidths
@@ -120,6 +120,8 @@ class Effect:
         The readings with and without covariates, where the study has any.
     randomisation
         The local randomisation answer, or None; then `randomisation_reason` says why.
+    without_slopes
+        The same with each side's slope in the score taken off first.
     curvature_table, breakdown
         The honest interval at half, once and twice the bound, and the bound at which it first holds zero.
     mass_points, against_rule
@@ -144,6 +146,7 @@ class Effect:
     adjusted_reason: str | None
     randomisation: Randomisation | None
     randomisation_reason: str | None
+    without_slopes: Randomisation | None
     curvature_table: tuple[CurvatureRow, ...]
     breakdown: float | None
     mass_points: MassPoints
@@ -184,6 +187,8 @@ class Question:
     randomisation_reason: str | None = None
     against_rule: AgainstRule | None = None
     rows_without_covariate: Mapping[str, int] | None = None
+    covariates: tuple[str, ...] = ()
+    without_slopes: Randomisation | None = None
 
 
 def estimate_effect(line: Line, bandwidths: Bandwidths, question: Question) -> Effect:
@@ -200,6 +205,8 @@ def estimate_effect(line: Line, bandwidths: Bandwidths, question: Question) -> E
     points = mass_points(line.sample, bandwidths, line.choices.kernel)
     lead, notes = _lead(reading, points, line.choices)
     notes += _notes(line, reading, points, question)
+    if with_covariates is not None:
+        notes += _jumping_covariates(line, bandwidths, question)
     sharp = reading if reading.intention is None else reading.intention
     return Effect(
         outcome=question.outcome,
@@ -214,6 +221,7 @@ def estimate_effect(line: Line, bandwidths: Bandwidths, question: Question) -> E
         adjusted_reason=reason,
         randomisation=question.randomisation,
         randomisation_reason=question.randomisation_reason,
+        without_slopes=question.without_slopes,
         curvature_table=_curvature_table(sharp, line),
         breakdown=(
             breakdown_curvature(
@@ -376,6 +384,26 @@ def _notes(line: Line, reading: Reading, points: MassPoints, question: Question)
     if line.with_covariates is not None:
         notes += _covariate_notes(line, question)
     return notes
+
+
+def _jumping_covariates(line: Line, bandwidths: Bandwidths, question: Question) -> list[Note]:
+    """A covariate that itself jumps moves the adjusted estimate: said for each whose own interval excludes zero."""
+    jumps, errors = line.covariate_jumps(bandwidths)
+    z = quantile(line.choices.level)
+    names = question.covariates or tuple(f"covariate {j + 1}" for j in range(len(jumps)))
+    found = [name for name, jump, error in zip(names, jumps, errors) if abs(jump) > z * error > 0.0]
+    if not found:
+        return []
+    subject = found[0] if len(found) == 1 else ", ".join(found[:-1]) + " and " + found[-1]
+    return [
+        Note(
+            code="covariate-jumps",
+            severity="caution",
+            sentence=f"{subject} {'jumps' if len(found) == 1 else 'jump'} at the line: adjusting for "
+            f"{'it' if len(found) == 1 else 'them'} would move the effect, not only sharpen it.",
+            remedy="Leave it out of the adjustment, and ask why units on the two sides differ.",
+        )
+    ]
 
 
 def _covariate_notes(line: Line, question: Question) -> list[Note]:

@@ -179,6 +179,24 @@ class Line:
             )
         return adjusted(fit, 1 + int(self.fuzzy)) if adjust else fit
 
+    def covariate_jumps(self, bandwidths: Bandwidths) -> tuple[Vector, Vector]:
+        """Each covariate's jump at the line and its standard error, as if it were an outcome, shape (k,)."""
+        if self.with_covariates is None or self.covariate_ladder is None:
+            return np.zeros(0), np.zeros(0)
+        first = 1 + int(self.fuzzy)
+        if self.on_ladder:
+            fit = self.covariate_ladder.fit(bandwidths, order=self.choices.order)
+        else:
+            fit = fit_rows(
+                self.with_covariates,
+                bandwidths,
+                kernel=self.choices.kernel,
+                order=self.choices.order,
+                variance=self.choices.variance,
+            )
+        error = np.sqrt(np.maximum(np.diagonal(fit.robust_covariance)[first:], 0.0))
+        return fit.robust_jump[first:], error
+
     def reading(self, bandwidths: Bandwidths, *, adjust: bool | None = None) -> Reading:
         """The effect with its intervals; adjusted as the choices say unless told otherwise."""
         take_off = self.choices.adjust if adjust is None else adjust

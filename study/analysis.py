@@ -214,6 +214,10 @@ class Workbench:
             cutoff=None if pooled else self._cutoff(site),
             randomisation=None if isinstance(randomised, str) else randomised,
             randomisation_reason=randomised if isinstance(randomised, str) else None,
+            without_slopes=None
+            if isinstance(randomised, str)
+            else self._without_slopes(outcome, site, randomised),
+            covariates=self.study.columns.covariates,
             against_rule=self.against_rule(site),
             rows_without_covariate={
                 name: int(np.isnan(column[self._rows(site)]).sum())
@@ -378,6 +382,22 @@ class Workbench:
             names=covariates,
             seed=self.study.seed,
         )
+        return self._drawn(outcome, site, (window.low, window.high), slope=False)
+
+    def _without_slopes(self, outcome: str, site: str | None, found: Randomisation) -> Randomisation:
+        """The same window with each side's slope taken off first."""
+        key = ("slopes", outcome, site, found.window, found.level, self.study.estimate.donut, self.study.seed)
+        kept = self._randomised.get(key)
+        if kept is None or isinstance(kept, str):
+            kept = self._randomised[key] = self._drawn(outcome, site, found.window, slope=True)
+        return kept
+
+    def _drawn(
+        self, outcome: str, site: str | None, window: tuple[float, float], *, slope: bool
+    ) -> Randomisation:
+        a, choices = self.assigned, self.study.estimate
+        rows = np.concatenate([side[:NEAREST_FOR_WINDOW] for side in self._outward(site)])
+        rows = rows[np.abs(a.position[rows]) >= choices.donut]
         known = rows[~np.isnan(a.outcomes[outcome][rows])]
         return randomise(
             position=a.position[known],
@@ -387,4 +407,5 @@ class Workbench:
             window=window,
             level=choices.level,
             seed=self.study.seed,
+            slope=slope,
         )

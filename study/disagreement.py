@@ -107,6 +107,11 @@ def _randomisation_driver(effect: Effect, scale: float, error: float) -> list[tu
         (
             abs(drift) / error,
             f"The randomisation answer takes the outcome to be flat within {width_text(drawn.window[1])} of the line; "
-            f"the slopes of the local fits alone would add {figure(scale * drift, scale * error, sign=True)} to it.",
+            f"the slopes of the local fits alone would add {figure(scale * drift, scale * error, sign=True)} to it"
+            + (
+                f", and with slopes removed it is {figure(scale * effect.without_slopes.estimate, scale * error, sign=True)}."
+                if effect.without_slopes is not None
+                else "."
+            ),
         )
     ]

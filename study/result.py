@@ -275,18 +275,27 @@ def _randomisation(effect: Effect) -> dict[str, Any]:
     found: Randomisation | None = effect.randomisation
     if found is None:
         return {"randomisation": None, "randomisation_reason": effect.randomisation_reason}
-    return {
-        "randomisation": {
-            "window": [number(found.window[0]), number(found.window[1])],
-            "below": found.below,
-            "above": found.above,
-            "estimate": number(found.estimate),
-            "hodges_lehmann": number(found.hodges_lehmann),
-            "p_value": number(found.p_value),
-            "low": number(found.low),
-            "high": number(found.high),
-            "draws": found.draws,
-            "exact": found.exact,
-            "statistic": found.statistic,
-        }
+    document = {"randomisation": randomisation_document(found)}
+    if effect.without_slopes is not None:
+        document["randomisation_without_slopes"] = randomisation_document(effect.without_slopes)
+    return document
+
+
+def randomisation_document(found: Randomisation) -> dict[str, Any]:
+    """The local randomisation answer; an end that too few assignments leave open is None with a reason."""
+    document = {
+        "window": [number(found.window[0]), number(found.window[1])],
+        "below": found.below,
+        "above": found.above,
+        "estimate": number(found.estimate),
+        "hodges_lehmann": number(found.hodges_lehmann),
+        "p_value": number(found.p_value),
+        "low": number(found.low),
+        "high": number(found.high),
+        "draws": found.draws,
+        "exact": found.exact,
+        "statistic": found.statistic,
     }
+    if math.isinf(found.low) or math.isinf(found.high):
+        document["reason"] = "too few assignments are possible to close the interval"
+    return document
