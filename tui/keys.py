@@ -24,6 +24,8 @@ class Key:
         The names by which the toolkit knows the key or keys.
     shown
         What is printed on the keyboard.
+    pair
+        In the footer, instead of `shown`: this key and its opposite; "" for a key that stands alone.
     label
         One or two words for the footer.
     help
@@ -39,8 +41,14 @@ class Key:
     shown: str
     label: str
     help: str
+    pair: str = ""
     footer: bool = True
     edits: bool = False
+
+    @property
+    def in_footer(self) -> str:
+        """What the footer prints for it."""
+        return self.pair or self.shown
 
     @property
     def action(self) -> str:
@@ -73,10 +81,20 @@ class Place:
 
 
 def _key(
-    id: str, keys: str, shown: str, label: str, sentence: str, *, footer: bool = True, edits: bool = False
+    id: str,
+    keys: str,
+    shown: str,
+    label: str,
+    sentence: str,
+    *,
+    pair: str = "",
+    footer: bool = True,
+    edits: bool = False,
 ) -> Key:
     names = tuple(keys.split(","))
-    return Key(id=id, keys=names, shown=shown, label=label, help=sentence, footer=footer, edits=edits)
+    return Key(
+        id=id, keys=names, shown=shown, label=label, help=sentence, pair=pair, footer=footer, edits=edits
+    )
 
 
 EVERYWHERE: Final[tuple[Key, ...]] = (
@@ -111,9 +129,9 @@ _DATA: Final[tuple[Key, ...]] = (
 
 _ASSIGNMENT: Final[tuple[Key, ...]] = (
     _key("assignment.left", "left", "←", "line", "Move the line a little down.", footer=False),
-    _key("assignment.right", "right", "←→", "move line", "Move the line a little up."),
+    _key("assignment.right", "right", "→", "move line", "Move the line a little up.", pair="←→"),
     _key("assignment.far_left", "down", "↓", "far", "Move the line a long way down.", footer=False),
-    _key("assignment.far_right", "up", "↑↓", "by much", "Move the line a long way up."),
+    _key("assignment.far_right", "up", "↑", "by much", "Move the line a long way up.", pair="↑↓"),
     _key("assignment.set", "enter", "Enter", "set it", "Make the line where it stands the study's cutoff.", edits=True),
     _key("assignment.back", "escape", "Esc", "put back", "Put the line back on the study's cutoff."),
     _key("assignment.cutoff", "c", "c", "type", "Type the cutoff.", edits=True),
@@ -124,9 +142,9 @@ _ASSIGNMENT: Final[tuple[Key, ...]] = (
 
 _EFFECT: Final[tuple[Key, ...]] = (
     _key("effect.narrower", "left", "←", "narrower", "Make the bandwidth a little narrower.", footer=False),
-    _key("effect.wider", "right", "←→", "width", "Make the bandwidth a little wider."),
+    _key("effect.wider", "right", "→", "width", "Make the bandwidth a little wider.", pair="←→"),
     _key("effect.much_narrower", "down", "↓", "much narrower", "Make the bandwidth much narrower.", footer=False),
-    _key("effect.much_wider", "up", "↑↓", "by much", "Make the bandwidth much wider."),
+    _key("effect.much_wider", "up", "↑", "by much", "Make the bandwidth much wider.", pair="↑↓"),
     _key("effect.best", "b", "b", "best", "Stand at the width that the rule gives (the MSE rule if the study names none)."),
     _key("effect.back", "escape", "Esc", "study's own", "Go back to the study's own width.", footer=False),
     _key("effect.keep", "enter", "Enter", "keep", "Make the width where you stand the study's own.", edits=True),

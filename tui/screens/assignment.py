@@ -7,6 +7,7 @@ from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import TYPE_CHECKING, Any, ClassVar, Final
 
+from textual import events
 from textual.binding import BindingType
 from textual.containers import Vertical
 from textual.widget import Widget
@@ -45,8 +46,12 @@ class AssignmentScreen(Room):
     place = "assignment"
     BINDINGS: ClassVar[list[BindingType]] = [*bindings_of("assignment")]
     DEFAULT_CSS = """
-    AssignmentScreen #rule { margin-bottom: 1; }
+    AssignmentScreen #rule { margin: 1 0; }
+    AssignmentScreen.low #rule { margin: 0 0 1 0; }
+    AssignmentScreen.tiny #rule { margin: 0; }
+    AssignmentScreen.tiny #picture { display: none; }
     AssignmentScreen #picture { height: 1fr; }
+    AssignmentScreen #picture.-empty { display: none; }
     AssignmentScreen #facts { margin-top: 1; }
     """
 
@@ -69,6 +74,11 @@ class AssignmentScreen(Room):
     def slots(self) -> Sequence[Slot[Any, Any]]:
         """Reading the score."""
         return (self._slot,)
+
+    def on_resize(self, event: events.Resize) -> None:
+        """Choose the layout for the size."""
+        self.set_class(event.size.height < 30, "low")
+        self.set_class(event.size.height < 18, "tiny")
 
     # ---- the score --------------------------------------------------------------------------------------------
 
@@ -150,14 +160,14 @@ class AssignmentScreen(Room):
         if study is None or reading is None or cutoff is None:
             rule.show([[(line, Ink.MUTED)] for line in wrapped(self._why_nothing(study), width)])
             facts.show([])
-            self.query_one("#picture").display = False
+            self.query_one("#picture").set_class(True, "-empty")
             return
         zoom = self._zoom()
         reach = None if zoom is None else zoom * (reading.high - reading.low)
         counts = reading.line(cutoff, study.assignment.treated, reach)
         rule.show(self._rule_lines(study, cutoff, width))
         facts.show(self._facts(study, reading, counts))
-        self.query_one("#picture").display = True
+        self.query_one("#picture").set_class(False, "-empty")
         for histogram in self.query("#histogram"):
             histogram.set_data(  # type: ignore[attr-defined]
                 histogram=counts,

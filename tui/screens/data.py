@@ -263,7 +263,7 @@ class DataScreen(Room):
             "Keep rows where",
             desk.study.data.rows or "",
             lambda text: self.bench.try_change({"data.rows": text or None}),
-            hint="A condition on the file's own columns, such as  rooms > 0 and year = 2024 . Empty keeps every row.",
+            hint="A condition on the file's own columns, such as: rooms > 0 and year = 2024. Empty keeps every row.",
             typed=self._condition_typed,
         )
 

@@ -224,8 +224,9 @@ class EffectScreen(EffectKeys):
         headline.show(headline_lines(standing, width))
         side = 72 if self.has_class("wide") else width
         self.query_one("#choices", Lines).show([choices_line(desk.study)])
+        drawn, digits = answers(standing.effect)
         for table in self.query("#answers"):
-            table.set_answers(answers(standing.effect))  # type: ignore[attr-defined]
+            table.set_answers(drawn, digits=digits)  # type: ignore[attr-defined]
         room = 30 if self.has_class("wide") else 4 if self.size.height >= 34 else 0
         why: list[Line] = []
         if self.has_class("wide"):

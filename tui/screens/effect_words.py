@@ -11,7 +11,6 @@ from tui.screens.lines import Line, wrapped
 
 if TYPE_CHECKING:  # these bring numpy, which the first screen must not wait for
     from estimation.effect import Effect
-    from study.wording import AnswerRow
     from tui.widgets.answers import Answer
 
 
@@ -56,9 +55,7 @@ def headline_lines(standing: Standing, width: int) -> list[Line]:
     effect = standing.effect
     first, _, rest = effect_headline(effect).partition("  ")
     reading, at = effect.reading, effect.bandwidths
-    low, high = effect.leading
-    clear = low > 0.0 or high < 0.0
-    verdict = "excludes zero" if clear else "holds zero"
+    verdict = "holds zero" if _holds_zero(effect) else "excludes zero"
     near = (
         width_text(at.below) if at.below == at.above else f"{width_text(at.below)} and {width_text(at.above)}"
     )
@@ -67,6 +64,14 @@ def headline_lines(standing: Standing, width: int) -> list[Line]:
     if len(first) + len(rest) + len(verdict) + 5 > width:
         lines = [[(first, Ink.ACCENT)], *[[part] for part in wrapped(f"{rest}, {verdict}", width)]]
     return [*lines, [(rows, Ink.TEXT), ("   " + _mark(standing), Ink.MUTED if standing.own else Ink.STRONG)]]
+
+
+def _holds_zero(effect: Effect) -> bool:
+    """Whether the answer that leads holds zero; a set of ratios may lie on both sides of it and still exclude it."""
+    if effect.lead == "anderson-rubin" and effect.reading.take_up is not None:
+        return any(low <= 0.0 <= high for low, high in effect.reading.take_up.anderson_rubin)
+    low, high = effect.leading
+    return not (low > 0.0 or high < 0.0)
 
 
 def _mark(standing: Standing) -> str:
@@ -88,23 +93,22 @@ def sentence_lines(standing: Standing, study: Study, width: int) -> list[str]:
     return wrapped(effect_sentence(standing.effect, study), width)
 
 
-def answers(effect: Effect) -> list[Answer]:
-    """The answers, for the table that draws them."""
+def answers(effect: Effect) -> tuple[list[Answer], int]:
+    """The answers for the table that draws them, and the decimals that the headline has: one number, one spelling."""
     from study.wording import answers_table
     from tui.widgets.answers import Answer
 
-    def drawn(row: AnswerRow) -> Answer:
+    rows = answers_table(effect)
+    drawn = []
+    for row in rows:
         estimate, low, high = row.numbers
-        return Answer(
-            name=row.name,
-            estimate=estimate,
-            low=low,
-            high=high,
-            note=row.reason or row.basis,
-            chosen=row.leads,
+        note = row.reason or row.basis
+        drawn.append(
+            Answer(name=row.name, estimate=estimate, low=low, high=high, note=note, chosen=row.leads)
         )
-
-    return [drawn(row) for row in answers_table(effect)]
+    leading = next((row for row in rows if row.leads and row.reason is None), None)
+    spelt = leading if leading is not None else next((row for row in rows if row.reason is None), None)
+    return drawn, 2 if spelt is None else len(spelt.low.partition(".")[2])
 
 
 def why_lines(standing: Standing, width: int, most: int) -> list[Line]:

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Callable, Iterator, Sequence
 from dataclasses import dataclass
-from typing import TYPE_CHECKING, ClassVar, cast
+from typing import TYPE_CHECKING, ClassVar, Final, cast
 
 from textual import events, on
 from textual.app import ComposeResult
@@ -21,6 +21,9 @@ from tui.widgets.table import Cell, Column, Rows, VTable
 if TYPE_CHECKING:
     from tui.app import CutbankApp
     from tui.screens.room import Room
+
+
+_KEY_CELLS: Final = 10
 
 
 class Page(Screen[None]):
@@ -175,7 +178,7 @@ class HelpPage(Page):
 
 
 def help_lines(place: Place, why_not: Callable[[Key], str], width: int) -> list[Line]:
-    """The help of one screen: words first, then keys; a key that can't work now says why.
+    """The help of one screen: its keys, its words explained, the keys of every screen. A key that can't work now says why.
 
     Parameters
     ----------
@@ -186,30 +189,31 @@ def help_lines(place: Place, why_not: Callable[[Key], str], width: int) -> list[
     width : int
         Cells there are.
     """
-    lines: list[Line] = []
+    own, everywhere = place.keys, [key for key in keys_of(place.name) if key not in place.keys]
+    lines = [line for key in own for line in _key_lines(key, why_not(key), width)]
+    if own:
+        lines.append([""])
     widest = max((len(concept.word) for concept in place.concepts), default=0) + 2
     for concept in place.concepts:
         said = wrapped(concept.said, min(width, 100) - widest)
-        lines.append([(concept.word.ljust(widest), Ink.ACCENT), said[0]])
+        lines.append([(concept.word.ljust(widest), Ink.STRONG), said[0]])
         lines += [[" " * widest + more] for more in said[1:]]
     if place.concepts:
         lines.append([""])
-    for key in keys_of(place.name):
-        reason = why_not(key)
-        words = key.help if not reason else f"{key.help} Not now: {reason[:1].lower()}{reason[1:]}."
-        said = wrapped(words, min(width, 100) - 8)
-        shown = key.shown.ljust(8)
-        lines.append(
-            [(shown, Ink.FAINT if reason else Ink.ACCENT), (said[0], Ink.MUTED if reason else Ink.TEXT)]
-        )
-        lines += [[(" " * 8 + more, Ink.MUTED if reason else Ink.TEXT)] for more in said[1:]]
     digits = "  ".join(f"{other.digit} {other.title}" for other in PLACES)
-    lines.append([("1 to 6".ljust(8), Ink.ACCENT), f"Go to a screen: {digits}."])
-    lines.append([""])
-    lines.append(
-        [("in lists".ljust(8), Ink.ACCENT), ", ".join(f"{shown}: {said}" for shown, said in IN_LISTS) + "."]
-    )
+    lines.append([("1 to 6".ljust(_KEY_CELLS), Ink.ACCENT), f"Go to a screen: {digits}."])
+    lines += [line for key in everywhere for line in _key_lines(key, why_not(key), width)]
+    in_lists = ", ".join(f"{shown}: {said}" for shown, said in IN_LISTS) + "."
+    lines.append([("in lists".ljust(_KEY_CELLS), Ink.ACCENT), in_lists])
     return lines
+
+
+def _key_lines(key: Key, reason: str, width: int) -> list[Line]:
+    words = key.help if not reason else f"{key.help} Not now: {reason[:1].lower()}{reason[1:]}."
+    said = wrapped(words, min(width, 100) - _KEY_CELLS)
+    ink = Ink.MUTED if reason else Ink.TEXT
+    first: Line = [(key.shown.ljust(_KEY_CELLS), Ink.FAINT if reason else Ink.ACCENT), (said[0], ink)]
+    return [first, *[[(" " * _KEY_CELLS + more, ink)] for more in said[1:]]]
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)

@@ -330,12 +330,12 @@ def keys_line(room: Room, width: int) -> Line:
     parts: list[Part] = []
     used = cell_width("? help") + 2
     for key in keys:
-        wide = cell_width(f"{key.shown} {key.label}") + 2
+        wide = cell_width(f"{key.in_footer} {key.label}") + 2
         if used + wide > width:
             break
         off = bool(room.why_not_key(key))
         parts += [
-            (key.shown, Ink.FAINT if off else Ink.ACCENT),
+            (key.in_footer, Ink.FAINT if off else Ink.ACCENT),
             (f" {key.label}  ", Ink.FAINT if off else Ink.MUTED),
         ]
         used += wide
