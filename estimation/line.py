@@ -11,6 +11,7 @@ from estimation.adjustment import adjusted
 from estimation.arrays import Codes, Vector
 from estimation.bandwidth import ScoreSpread, choose_bandwidths, rule_of_thumb_curvature
 from estimation.choices import Choices
+from estimation.cluster_ladder import ClusterLadder
 from estimation.errors import CannotEstimate
 from estimation.inference import critical_values, quantile
 from estimation.ladder import Ladder, LineFits, Widths
@@ -87,6 +88,8 @@ class Line:
         Bounds on the second derivative, shape (targets,): the outcome's, then take-up's.
     spread
         What the first bandwidth needs of the scores.
+    clusters, covariate_clusters
+        Sums by cluster of either sample; None without clusters.
     """
 
     sample: Sample
@@ -96,6 +99,8 @@ class Line:
     spread: ScoreSpread
     with_covariates: Sample | None = None
     covariate_ladder: Ladder | None = None
+    clusters: ClusterLadder | None = None
+    covariate_clusters: ClusterLadder | None = None
 
     @classmethod
     def prepare(cls, sample: Sample, choices: Choices, with_covariates: Sample | None = None) -> Line:
@@ -123,6 +128,8 @@ class Line:
                 if full is None
                 else Ladder.build(full, kernel=choices.kernel, order=choices.order, adjust=True)
             ),
+            clusters=_by_cluster(kept, choices),
+            covariate_clusters=None if full is None else _by_cluster(full, choices),
         )
 
     def choosing(self, choices: Choices) -> Line:
@@ -140,7 +147,7 @@ class Line:
     @property
     def on_ladder(self) -> bool:
         """Whether readings come from running sums, at once for any number of rows."""
-        return self.choices.variance == "neighbour" and self.sample.below.cluster is None
+        return self.choices.variance == "neighbour" or self.clusters is not None
 
     def bandwidths(self) -> Bandwidths:
         """What the choices ask for; covariates never move it."""
@@ -159,15 +166,17 @@ class Line:
 
     def fit(self, bandwidths: Bandwidths, *, adjust: bool = False) -> LineFit:
         """The fit at one pair of widths, with the study's variance, covariates taken off where asked."""
-        sample, ladder = self.sample, self.ladder
+        sample, ladder, clusters = self.sample, self.ladder, self.clusters
         if adjust:
             if self.with_covariates is None or self.covariate_ladder is None:
                 raise CannotEstimate(
                     "There is no covariate to adjust for.", "Name covariates in the study first."
                 )
-            sample, ladder = self.with_covariates, self.covariate_ladder
+            sample, ladder, clusters = self.with_covariates, self.covariate_ladder, self.covariate_clusters
         if self.on_ladder:
             fit = ladder.fit(bandwidths, order=self.choices.order, adjust=adjust)
+            if clusters is not None:
+                fit = self._clustered(fit, clusters, bandwidths)
         else:
             fit = fit_rows(
                 sample,
@@ -179,6 +188,15 @@ class Line:
             )
         return adjusted(fit, 1 + int(self.fuzzy)) if adjust else fit
 
+    def _clustered(self, fit: LineFit, clusters: ClusterLadder, bandwidths: Bandwidths) -> LineFit:
+        spread = clusters.spread(bandwidths, order=self.choices.order, variance=self.choices.variance)
+        return replace(
+            fit,
+            covariance=spread.covariance,
+            robust_covariance=spread.robust_covariance,
+            clusters=spread.clusters,
+        )
+
     def covariate_jumps(self, bandwidths: Bandwidths) -> tuple[Vector, Vector]:
         """Each covariate's jump at the line and its standard error, as if it were an outcome, shape (k,)."""
         if self.with_covariates is None or self.covariate_ladder is None:
@@ -186,6 +204,8 @@ class Line:
         first = 1 + int(self.fuzzy)
         if self.on_ladder:
             fit = self.covariate_ladder.fit(bandwidths, order=self.choices.order)
+            if self.covariate_clusters is not None:
+                fit = self._clustered(fit, self.covariate_clusters, bandwidths)
         else:
             fit = fit_rows(
                 self.with_covariates,
@@ -213,7 +233,7 @@ class Line:
         should_stop
             Asked between widths where each costs a pass over rows; the rest stay NaN once it answers True.
         """
-        if self.on_ladder and not self.fuzzy and not self.choices.adjust:
+        if self.on_ladder and self.clusters is None and not self.fuzzy and not self.choices.adjust:
             fits = self.ladder.fits(Widths.common(bandwidth, self._fixed_pilot()), order=self.choices.order)
             return self._sweep_from(bandwidth, fits)
         rows = np.full((4, len(bandwidth)), np.nan)
@@ -325,6 +345,12 @@ def _curve_of(side: SideSums, width: float, kernel: str, order: int, u: Vector) 
     fit = (basis @ coefficients + side.centre[0]).astype(np.float64)
     error = np.sqrt(np.maximum(np.einsum("ni,ij,nj->n", basis, spread, basis), 0.0)).astype(np.float64)
     return fit, error
+
+
+def _by_cluster(sample: Sample, choices: Choices) -> ClusterLadder | None:
+    if sample.below.cluster is None:
+        return None
+    return ClusterLadder.build(sample, kernel=choices.kernel, order=choices.order)
 
 
 def _curvature(ladder: Ladder, choices: Choices) -> Vector:

@@ -21,6 +21,7 @@ import numpy as np
 
 from estimation.adjustment import common_coefficients
 from estimation.arrays import Matrix, Vector
+from estimation.cluster_ladder import ClusterLadder, cluster_rule
 from estimation.kernels import count_inside, kernel_values
 from estimation.line_fit import Bandwidths, LineFit, too_few
 from estimation.sample import Sample, Side, SideName
@@ -106,7 +107,7 @@ def fit_rows(
     sample
         Rows of both sides; any donut is already taken out.
     variance
-        "neighbour", "hc0" … "hc3"; clustered wherever the sample has clusters.
+        "neighbour", "hc0" … "hc3"; with clusters the sandwich for "hc0" and "hc1", else the jackknife.
     adjust
         Whether the sample's covariates adjust the earlier variables (see `estimation.adjustment`).
     """
@@ -118,6 +119,11 @@ def fit_rows(
     sign = sample.treated_sign
     covariance, clusters = _joint_spread(sample, below, above, "plain")
     robust_covariance, _ = _joint_spread(sample, below, above, "robust")
+    if clusters is not None and cluster_rule(variance) == "jackknife":
+        spread = ClusterLadder.build(sample, kernel=kernel, order=order).spread(
+            bandwidths, order=order, variance=variance
+        )
+        covariance, robust_covariance = spread.covariance, spread.robust_covariance
     return LineFit(
         levels_below=below.level,
         levels_above=above.level,
@@ -221,6 +227,7 @@ def _joint_spread(
     high = above.plain_scores if which == "plain" else above.robust_scores
     if sample.below.cluster is None or sample.above.cluster is None:
         return independent_spread(low) + independent_spread(high), None
+    # Row by row, this is the sandwich; `fit_rows` puts the jackknife in its place where the study wants that.
     scores = np.concatenate((-low, high))
     cluster = np.concatenate((sample.below.cluster[: len(low)], sample.above.cluster[: len(high)]))
     spread = clustered_spread(scores, cluster)
