@@ -25,14 +25,13 @@ from study.readiness import missing_parts
 from tui.everywhere import EverywhereApp
 from tui.failures import write_failure
 from tui.lock import BEAT_S
-from tui.look import THEME_NAMES, Ink, Look, detect_look
+from tui.look import THEME_NAMES, Look, detect_look
 from tui.memory import remember_study
 from tui.opening import bare_folder, desk_for, first_place
 from tui.screens.assignment import AssignmentScreen
 from tui.screens.awaiting import CompareScreen, DoubtsScreen, ReleaseScreen
 from tui.screens.data import DataScreen
 from tui.screens.effect import EffectScreen
-from tui.screens.lines import Part
 from tui.screens.room import Room
 from tui.slot import Slot
 from tui.state import Desk, StudyEdited, StudySaved, WorkbenchFailed, WorkbenchReady
@@ -86,6 +85,7 @@ class CutbankApp(EverywhereApp):
         self.workbench: Workbench | None = None
         self.trouble: tuple[str, str] | None = None
         self.progress = ""
+        self.doing = ""  # the stage of the reading, in words
         self.started = False  # once true the first screen stands, and heavy things may be loaded
         self.browse_from: Path | None = None
         self._saving: Slot[Study, Study] = Slot("save", self._save, show=self._saved, failed=self._not_saved)
@@ -105,7 +105,7 @@ class CutbankApp(EverywhereApp):
 
     def on_mount(self) -> None:
         """Catch the signals of a lost connection; then bring the data, once the first screen has been drawn."""
-        loop = asyncio.get_running_loop()
+        loop = self._loop_of_bench = asyncio.get_running_loop()
         for number in (signal.SIGHUP, signal.SIGTERM):
             try:
                 loop.add_signal_handler(number, self._told_to_end, number)
@@ -276,7 +276,19 @@ class CutbankApp(EverywhereApp):
         workbench = self.workbench
         if workbench is not None:
             return workbench.with_study(study)
-        return Workbench.open(study)
+        return Workbench.open(study, progress=self._report)
+
+    def _report(self, doing: str) -> None:
+        """What the reading thread is at; a handful of stages, so a line each is quiet enough."""
+        try:
+            self._loop_of_bench.call_soon_threadsafe(self._show_progress, doing)
+        except RuntimeError:
+            return  # the program has ended meanwhile
+
+    def _show_progress(self, doing: str) -> None:
+        self.doing = doing
+        if self.progress and self.workbench is None:
+            self._refresh_room()
 
     def _opened(self, request: Study, workbench: Workbench) -> None:
         self.workbench, self.trouble, self.progress = workbench, None, ""
@@ -341,29 +353,6 @@ class CutbankApp(EverywhereApp):
     def _refresh_top(self) -> None:
         if self.room is not None and self.room.is_attached:
             self.room.refresh_top()
-
-    def data_name(self) -> str:
-        """The data file's name."""
-        return Path(self.desk.study.data.path).name if self.desk is not None else ""
-
-    def state_parts(self) -> list[Part]:
-        """Progress, and whether the plan is sealed and the study saved, for the header."""
-        desk = self.desk
-        if desk is None:
-            return []
-        # In the place of the plan's state, not beside it: a title that shrinks and grows with every read would flicker.
-        parts: list[Part] = [
-            (f"{self.progress} ...", Ink.ACCENT) if self.progress else ("unsealed", Ink.MUTED)
-        ]
-        if desk.why_read_only:
-            parts.append(("  read only", Ink.WARNING))
-        elif desk.problem:
-            parts.append(("  not saved", Ink.WARNING))
-        elif desk.saved is None:
-            parts.append(("  not yet saved", Ink.MUTED))
-        else:
-            parts.append(("  saved" if desk.is_saved else "  saving", Ink.MUTED))
-        return parts
 
     # ---- safety -----------------------------------------------------------------------------------------------
 

@@ -9,7 +9,7 @@ import sys
 from pathlib import Path
 
 import pytest
-from bench_study import STUDY, bench, make_study, press, settled, shown
+from bench_study import STUDY, bench, make_study, press, settled, shown, type_text
 from pty_harness import Terminal
 
 from study.document import load_study
@@ -216,6 +216,42 @@ async def test_the_hints_can_be_sent_away_at_once(tmp_path: Path) -> None:
         await settled(pilot)
         await press(pilot, "f6")
         assert "Hint" not in shown(pilot) and not walk_is_due()
+
+
+async def test_any_action_is_found_by_name_and_done(tmp_path: Path) -> None:
+    path = make_study(tmp_path)
+    app = bench(path)
+    async with app.run_test(size=SIZE) as pilot:
+        await settled(pilot)
+        await press(pilot, "f2")
+        await type_text(pilot, "next kernel")
+        await settled(pilot)
+        assert load_study(path).estimate.kernel == "uniform"
+        await press(pilot, "f2")
+        await type_text(pilot, "keep", enter=False)
+        await type_text(pilot, "go to data")
+        assert app.room is not None and app.room.place == "data"
+        await press(pilot, "f2")
+        await type_text(pilot, "xyzzy", enter=False)
+        assert "Nothing is called that; try another word." in shown(pilot)
+        await press(pilot, "enter", "escape")
+        assert "▸1 Data" in shown(pilot)
+
+
+async def test_leaving_the_browser_without_a_study_says_how_to_come_back(tmp_path: Path) -> None:
+    app = bench(None)
+    app.browse_from = tmp_path
+    async with app.run_test(size=SIZE) as pilot:
+        await settled(pilot)
+        assert "Nothing here can be read." in shown(pilot)
+        await press(pilot, "escape")
+        assert "f opens a data file or a study." in shown(pilot) and "no study is open" in shown(pilot)
+        await press(pilot, "o")
+        assert "No study is open: f on the Data screen opens one." in shown(pilot)
+        for key in "23456":
+            await press(pilot, key)
+        await press(pilot, "u", "v", "escape", "q")
+    assert app.return_code == 0
 
 
 async def test_control_c_says_how_to_leave_and_does_not(tmp_path: Path) -> None:

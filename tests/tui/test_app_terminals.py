@@ -62,8 +62,8 @@ def test_a_small_terminal_begins_with_the_effect(tmp_path: Path) -> None:
 def test_bytes_of_an_idle_screen_and_of_a_step(tmp_path: Path) -> None:
     with start(make_study(tmp_path), (100, 30)) as terminal:
         terminal.wait_for("Randomisation", patience=30)
-        terminal.settle(quiet=1.0)
-        assert terminal.read(2.0) == 0  # idle: nothing at all
+        terminal.settle(quiet=0.6)
+        assert terminal.read(1.5) == 0  # idle: nothing at all
         steps = []
         for key in ("\x1b[C", "\x1b[C", "\x1b[D", "\x1b[C"):
             terminal.type(key)

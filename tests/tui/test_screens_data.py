@@ -104,8 +104,8 @@ async def test_a_file_that_cannot_be_read_is_a_sentence(tmp_path: Path) -> None:
     async with app.run_test(size=SIZE) as pilot:
         await settled(pilot)
         await press(pilot, "1")
-        said = " ".join(shown(pilot).split())
-        assert "homes.csv: there is no such" in said
+        await settled(pilot)  # two lines where one was: the layout follows
+        assert "homes.csv: there is no such" in " ".join(shown(pilot).split())
         await press(pilot, "3")
         assert "homes.csv" in shown(pilot)
 

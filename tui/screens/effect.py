@@ -24,6 +24,7 @@ from tui.screens.effect_words import (
     sentence_lines,
     why_lines,
 )
+from tui.screens.header import data_name
 from tui.screens.lines import Line, Lines, wrapped
 from tui.screens.widths import reach_for
 from tui.slot import Slot
@@ -254,7 +255,9 @@ class EffectScreen(EffectKeys):
             return " ".join(self.bench.trouble)
         if self._problem:
             return self._problem
-        return f"Reading {self.bench.data_name()} ..." if self.bench.workbench is None else "Estimating ..."
+        if self.bench.workbench is not None:
+            return "Estimating ..."
+        return f"{self.bench.doing or 'Reading ' + data_name(self.bench)} ..."
 
     def _draw_chart(self) -> None:
         standing, prepared = self.standing, self.prepared

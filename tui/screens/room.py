@@ -14,9 +14,10 @@ from textual.widget import Widget
 from textual.widgets import Input
 
 from study.literal import clean
-from tui.keys import BY_NAME, PLACES, Key, Place, key_named, keys_of
+from tui.keys import BY_NAME, Key, Place, key_named, keys_of
 from tui.look import Ink
 from tui.safe import Entry
+from tui.screens.header import header
 from tui.screens.lines import Line, Lines, Part, wrapped
 from tui.slot import Slot
 from tui.walk import HINTS
@@ -24,8 +25,6 @@ from tui.widgets.cells import cell_width
 
 if TYPE_CHECKING:
     from tui.app import CutbankApp
-
-LEAST_WIDTH, LEAST_HEIGHT = 80, 24
 
 
 class Room(Screen[None]):
@@ -340,33 +339,6 @@ def keys_line(room: Room, width: int) -> Line:
         ]
         used += wide
     return parts, [("?", Ink.ACCENT), (" help", Ink.MUTED)]
-
-
-def header(bench: CutbankApp, place: str, width: int, height: int) -> list[Line]:
-    """The two lines at the top: which study, its state, and where we are among the screens."""
-    desk = bench.desk
-    if width < LEAST_WIDTH or height < LEAST_HEIGHT:
-        first: Line = [(f"{width}×{height} here: made for {LEAST_WIDTH}×{LEAST_HEIGHT} or more", Ink.WARNING)]
-    elif desk is None:
-        first = [("Cutbank", Ink.STRONG), ("  no study is open", Ink.MUTED)]
-    else:
-        title = desk.study.title or desk.study.path.parent.name
-        state = [(f"{bench.data_name()}  ", Ink.MUTED), *bench.state_parts()]
-        first = ([(title, Ink.STRONG)], state)
-    return [first, _names(place, width)]
-
-
-def _names(place: str, width: int) -> Line:
-    parts: list[Part] = []
-    for other in PLACES:
-        here = other.name == place
-        ink = Ink.ACCENT if here else Ink.FAINT if other.awaits else Ink.MUTED
-        # The mark, not only the colour, says where we are; it stands where a blank stands otherwise, so nothing jumps.
-        words = f"{'▸' if here else ' '}{other.digit} {other.title}"
-        if width < LEAST_WIDTH:
-            words = f"{'▸' if here else ' '}{other.digit}" + (f" {other.title}" if here else "")
-        parts.append((words + " ", ink))
-    return parts
 
 
 def number(text: str) -> float | None:
