@@ -19,7 +19,7 @@ from tui.screens.effect_words import (
     Standing,
     all_text,
     answers,
-    choices_line,
+    choices_lines,
     headline_lines,
     sentence_lines,
     why_lines,
@@ -224,7 +224,8 @@ class EffectScreen(EffectKeys):
             return
         headline.show(headline_lines(standing, width))
         side = 72 if self.has_class("wide") else width
-        self.query_one("#choices", Lines).show([choices_line(desk.study)])
+        chosen = choices_lines(desk.study, side)
+        self.query_one("#choices", Lines).show(chosen if self.has_class("wide") else chosen[:1])
         drawn, digits = answers(standing.effect)
         for table in self.query("#answers"):
             table.set_answers(drawn, digits=digits)  # type: ignore[attr-defined]

@@ -130,8 +130,8 @@ def why_lines(standing: Standing, width: int, most: int) -> list[Line]:
     return lines
 
 
-def choices_line(study: Study) -> Line:
-    """The choices of the estimate in one line."""
+def choices_lines(study: Study, width: int) -> list[Line]:
+    """The choices of the estimate, in one line where they fit."""
     chosen = study.estimate
     parts = [f"{chosen.kernel} kernel", f"order {chosen.order}", f"{chosen.interval} leads"]
     parts.append("clustered errors" if study.columns.cluster else f"{chosen.variance} errors")
@@ -139,7 +139,7 @@ def choices_line(study: Study) -> Line:
         parts.append(f"donut {chosen.donut:g}")
     if study.columns.covariates:
         parts.append("covariates on" if chosen.adjust else "covariates off")
-    return [(", ".join(parts), Ink.MUTED)]
+    return [[(line, Ink.MUTED)] for line in wrapped(", ".join(parts), width)]
 
 
 def all_text(standing: Standing, study: Study) -> list[str]:
