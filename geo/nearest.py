@@ -113,6 +113,8 @@ class SegmentIndex:
         near, which = near.reshape(len(rows), -1), which.reshape(len(rows), -1)
         found = np.isfinite(near[:, 0])
         rows, near, which = rows[found], near[found], which[found]
+        if not len(rows):
+            return rows
         missing = which >= samples.tree.n
         which = np.where(missing, which[:, :1], which)  # fewer samples than asked within reach: look twice
         self._project(points[rows], samples.owner[which].reshape(len(rows), -1), rows, hits)

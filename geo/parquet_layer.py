@@ -67,7 +67,7 @@ def _plain(column: Any) -> Any:
         return column
     if column.dtype.kind in "iufb" and column.mask.any():
         return np.ma.filled(column.astype(np.float64), np.nan)
-    return column.astype(object).filled(None) if column.mask.any() else column.data
+    return np.ma.filled(column.astype(object), None) if column.mask.any() else column.data
 
 
 def _edges(column: Mapping[str, Any], source: Source) -> Edges:

@@ -7,6 +7,7 @@ doi:10.1007/s00190-012-0578-z). A projection is used for drawing only.
 
 from __future__ import annotations
 
+import warnings
 from dataclasses import dataclass
 from functools import lru_cache
 from typing import Final
@@ -253,7 +254,11 @@ def datum_notes(units: CRS, earth: Earth) -> tuple[Note, ...]:
     own = units.geodetic_crs
     if own is None or same_crs(own, earth.crs):
         return ()
-    group = TransformerGroup(own.to_2d(), earth.crs, always_xy=True)
+    with warnings.catch_warnings():
+        warnings.simplefilter(
+            "ignore"
+        )  # it warns of a missing grid; so does the note below, where it is seen
+        group = TransformerGroup(own.to_2d(), earth.crs, always_xy=True)
     if not group.transformers:
         accuracy = -1.0
     else:
@@ -290,8 +295,8 @@ def region_notes(longitude: Vector, latitude: Vector, crs: CRS) -> tuple[Note, .
             code="region",
             severity="check",
             sentence=(
-                f"The outline lies about {middle[0]:.1f}, {middle[1]:.1f} degrees, "
-                f"outside the region of {crs.name}: {region.name}."
+                f"The outline lies about longitude {middle[0]:.1f} and latitude {middle[1]:.1f}; {crs.name} "
+                f"is made for {region.west:g} to {region.east:g} and {region.south:g} to {region.north:g}."
             ),
             remedy="Check the name of the coordinate system.",
         ),

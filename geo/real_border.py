@@ -72,8 +72,9 @@ def border_by_units(boundary: Boundary, located: Located, *, band_m: float) -> R
     """Keep where units of both sides face each other.
 
     The outline is cut in pieces of a twentieth of the band; each unit within the band belongs to the piece that holds
-    its foot. Round each piece a window grows from half a band until it holds 30 units, up to two bands. The piece is
-    real if the thinner side has 3 units and 5 % of them. Each run of real pieces is then shrunk to where feet of both
+    its foot. Round each piece a window grows from a quarter of a band either way to a whole one, and on to two while it
+    holds fewer than 30 units. The piece is real if in any of these the thinner side has 3 units and 5 % of them: where
+    a line bends, feet of one side crowd and the other's are elsewhere. Each run of real pieces is then shrunk to where feet of both
     sides are, and a piece more.
 
     Parameters
@@ -123,19 +124,18 @@ def border_by_units(boundary: Boundary, located: Located, *, band_m: float) -> R
 
 def _real_pieces(counts: tuple[Codes, ...], closed: bool) -> Mask:
     pieces = len(counts[0])
-    widest = min(_PIECES, pieces)
+    widest = min(2 * _PIECES, (pieces - 1) // 2) if closed else 2 * _PIECES  # a window must not meet itself
     around = [np.pad(side, widest, mode="wrap" if closed else "constant") for side in counts]
     running = [np.concatenate(([0], np.cumsum(side))) for side in around]
     middle = np.arange(pieces) + widest
-    treated, comparison = np.zeros(pieces, dtype=np.int64), np.zeros(pieces, dtype=np.int64)
-    settled = np.zeros(pieces, dtype=bool)
+    real, total = np.zeros(pieces, dtype=bool), np.zeros(pieces, dtype=np.int64)
     for half in range(min(_PIECES // 4, widest), widest + 1):
         first, last = middle - half, np.minimum(middle + half + 1, len(around[0]))
-        here = [total[last] - total[first] for total in running]
-        treated, comparison = np.where(settled, treated, here[0]), np.where(settled, comparison, here[1])
-        settled |= treated + comparison >= _ENOUGH
-    thinner, total = np.minimum(treated, comparison), treated + comparison
-    return (thinner >= _LEAST) & (thinner >= _SHARE * total)
+        open_still = (half <= _PIECES) | (total < _ENOUGH)
+        treated, comparison = (sums[last] - sums[first] for sums in running)
+        thinner, total = np.minimum(treated, comparison), treated + comparison
+        real |= open_still & (thinner >= _LEAST) & (thinner >= _SHARE * total)
+    return real
 
 
 def _runs(real: Mask, closed: bool) -> list[tuple[int, int]]:

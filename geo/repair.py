@@ -105,8 +105,7 @@ def one_area(polygons: Shapes, *, gap: float | None, unit: str, what: str) -> tu
     """
     notes: list[Note] = []
     polygons = _mended(polygons, notes, what)
-    area = shapely.union_all(polygons) if len(polygons) > 1 else polygons[0]
-    area = _only_polygons(area)
+    area = _only_polygons(shapely.union_all(polygons) if len(polygons) > 1 else polygons)
     if area.is_empty or area.area <= 0.0:
         raise GeometryError(f"{what}: its polygons hold no area.", "Check the file.", code="empty")
     parts = len(shapely.get_parts(area))

@@ -51,9 +51,9 @@ def units_in_degrees(
         raise missing_crs(x[known], y[known], what)
     plain = isinstance(crs, str) and crs.strip().lower() == PLAIN
     if plain != boundary.is_plain:
-        first, second = ("plain units", "on the earth") if plain else ("on the earth", "plain units")
+        first, second = ("in plain units", "on the earth") if plain else ("on the earth", "in plain units")
         raise GeometryError(
-            f"{what} are given in {first}, the boundary in {second}.",
+            f"{what} are {first}, the boundary is {second}.",
             "Give both in a coordinate system, or declare both plain.",
             code="mixed",
         )
@@ -79,7 +79,7 @@ def _check_near(
         return
     swapped = system is None or system.is_geographic
     there = _overlap(up, across, boundary, reach_m) if swapped else 0.0
-    if there > 0.5 and there > 10.0 * here:
+    if there > 0.1 and there > 10.0 * here:
         names = "x and y" if system is None else "longitude and latitude"
         raise GeometryError(
             f"{what}: {names} seem to be swapped: {here:.0%} of them lie near the boundary as given, "
