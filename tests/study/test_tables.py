@@ -443,10 +443,12 @@ def test_json_lines_are_typed(tmp_path: Path) -> None:
 
 
 INTERRUPTED = """
+import signal
 import sys
 from pathlib import Path
 from study.table_source import interruptible, open_table
 
+signal.signal(signal.SIGINT, signal.default_int_handler)  # test workers ignore it, and hand that on
 try:
     with open_table(Path(sys.argv[1])) as opened, interruptible():
         print("running", flush=True)
