@@ -163,6 +163,14 @@ class Effect:
         return self.reading.take_up is not None
 
     @property
+    def holds_zero(self) -> bool:
+        """Whether the answer that leads does not speak against no effect; a set of two rays may well do."""
+        if self.lead == "anderson-rubin" and self.reading.take_up is not None:
+            return any(low <= 0.0 <= high for low, high in self.reading.take_up.anderson_rubin)
+        low, high = self.leading
+        return not (low > 0.0 or high < 0.0)
+
+    @property
     def leading(self) -> tuple[float, float]:
         """(low, high) of the answer that leads; infinite ends where a set has them."""
         reading = self.reading

@@ -23,7 +23,7 @@ from typing import Final
 
 import numpy as np
 
-from estimation.arrays import Matrix, Vector
+from estimation.arrays import Mask, Matrix, Vector
 from estimation.inference import critical_values, quantile
 
 # First-stage F below which the ratio's own interval does not lead (methods note, common practice of the trade).
@@ -116,9 +116,8 @@ def honest_anderson_rubin(
     near = centre + np.concatenate((-np.geomspace(1e-12, 1.0, 300), [0.0], np.geomspace(1e-12, 1.0, 300)))
     grid = np.unique(np.clip(np.concatenate((np.linspace(-half, half, 721), near, [0.0])), -half, half))
     inside = margin(grid) >= 0.0
-    cuts = [
-        _edge(margin, float(grid[i]), float(grid[i + 1])) for i in np.flatnonzero(inside[1:] != inside[:-1])
-    ]
+    change = np.flatnonzero(inside[1:] != inside[:-1])
+    cuts = _edges(margin, grid[change], grid[change + 1], inside[change])
     ends = ([-half] if inside[0] else []) + cuts + ([half] if inside[-1] else [])
 
     def ratio(angle: float) -> float:
@@ -127,12 +126,15 @@ def honest_anderson_rubin(
     return tuple((ratio(low), ratio(high)) for low, high in zip(ends[::2], ends[1::2]))
 
 
-def _edge(margin: Callable[[Vector], Vector], low: float, high: float) -> float:
-    inside_low = bool(margin(np.array([low]))[0] >= 0.0)
-    for _ in range(80):
-        middle = 0.5 * (low + high)
-        if bool(margin(np.array([middle]))[0] >= 0.0) == inside_low:
-            low = middle
-        else:
-            high = middle
-    return 0.5 * (low + high)
+def _edges(margin: Callable[[Vector], Vector], low: Vector, high: Vector, inside_low: Mask) -> list[float]:
+    """Where the margin changes sign between each low and high: all of them together, 32 times finer a pass."""
+    steps = np.linspace(0.0, 1.0, 33)
+    for _ in range(11 if len(low) else 0):
+        points = low[:, None] + (high - low)[:, None] * steps
+        same = (margin(points.ravel()).reshape(points.shape) >= 0.0) == inside_low[:, None]
+        # The first point of the other kind ends the stretch; the ends themselves are of different kinds.
+        same[:, 0], same[:, -1] = True, False
+        first = np.argmin(same, axis=1)
+        rows = np.arange(len(low))
+        low, high = points[rows, first - 1], points[rows, first]
+    return [float(cut) for cut in 0.5 * (low + high)]

@@ -164,14 +164,10 @@ def effect_sentence(effect: Effect, study: Study) -> str:
     reading, outcome = effect.reading, clean(effect.outcome)
     scale, unit = (100.0, " percentage points") if effect.binary else (1.0, "")
     spread = scale * (reading.robust.std_error if effect.lead == "robust" else reading.std_error)
-    low, high = effect.leading
     said = figure(scale * reading.estimate, spread, sign=True)
     bracket = f"{percent(effect.choices.level)} {LEADS[effect.lead]} {_reach(effect, scale, spread)}"
-    finding = (
-        "the interval holds zero"
-        if not (low > 0.0 or high < 0.0) or _holds_zero(effect)
-        else "the interval excludes zero"
-    )
+    finding = f"the {'set' if effect.lead == 'anderson-rubin' else 'interval'} "
+    finding += "holds zero" if effect.holds_zero else "excludes zero"
     where = _where(effect, study)
     if effect.fuzzy:
         start = f"{where}, the programme changes {outcome} by {said}{unit} for those whom the line moved to take it"
@@ -196,12 +192,6 @@ def _reach(effect: Effect, scale: float, spread: float) -> str:
         return pieces_text(effect.reading.take_up.anderson_rubin, scale, spread)
     low, high = effect.leading
     return f"{figure(scale * low, spread)} to {figure(scale * high, spread)}"
-
-
-def _holds_zero(effect: Effect) -> bool:
-    if effect.lead != "anderson-rubin" or effect.reading.take_up is None:
-        return False
-    return any(low <= 0.0 <= high for low, high in effect.reading.take_up.anderson_rubin)
 
 
 def _levels(effect: Effect, scale: float) -> str:
