@@ -42,7 +42,7 @@ def analyse(rows: int) -> dict[str, float]:
     sample = build_sample(position=x, outcome=y, above=above, treated="above", score_magnitude=1.0)
     line = Line.prepare(sample, Choices())
     widths = line.bandwidths()
-    near = np.flatnonzero(np.abs(x) <= max(widths.below * 1e4 / rows, 1e-4 * 1e6 / rows))
+    near = np.concatenate((sample.below.row[:50], sample.above.row[:50]))
     window = choose_window(position=x[near], above=above[near])
     drawn = randomise(position=x[near], outcome=y[near], above=above[near], treated="above", window=window)
     estimate_effect(line, widths, Question(outcome="y", randomisation=drawn))

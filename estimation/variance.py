@@ -46,11 +46,11 @@ def neighbour_residuals(
     if n < 2:
         return np.zeros_like(values)
     # A level common to all rows cancels in a residual; taken off first, it costs no digits.
-    values = values - values.mean(axis=0)
+    centre = values[:4096].mean(axis=0)
+    if not np.any(np.diff(distance) <= resolution):
+        return _residuals_without_ties(distance, values, centre, resolution, neighbours)
     starts = mass_point_starts(distance, resolution)
-    if len(starts) == n:
-        return _residuals_without_ties(distance, values, resolution, neighbours)
-    return _residuals_with_ties(distance, values, starts, resolution, neighbours)
+    return _residuals_with_ties(distance, values - centre, starts, resolution, neighbours)
 
 
 def mass_point_starts(distance: Vector, resolution: float) -> Codes:
@@ -73,14 +73,16 @@ def _residuals_with_ties(
     return np.asarray((values - mean) * np.sqrt(others / (others + 1.0)))
 
 
-def _residuals_without_ties(distance: Vector, values: Matrix, resolution: float, neighbours: int) -> Matrix:
+def _residuals_without_ties(
+    distance: Vector, values: Matrix, centre: Vector, resolution: float, neighbours: int
+) -> Matrix:
     """The same with one row a point, in blocks that stay in the processor's cache."""
     n, block = len(distance), 1 << 14
     result = np.empty_like(values)
     for start in range(0, n, block):
         stop = min(start + block, n)
         low, high = max(0, start - neighbours - 1), min(n, stop + neighbours + 1)
-        residual = _slide(distance[low:high], values[low:high], resolution, neighbours)
+        residual = _slide(distance[low:high], values[low:high] - centre, resolution, neighbours)
         result[start:stop] = residual[start - low : stop - low]
     return result
 
