@@ -164,9 +164,31 @@ class ClusterSpread:
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
-class ClusterLadder:
-    """Both sides' sums by cluster, for one kernel and every order up to `order`."""
+class ClusterChanges:
+    """What each cluster does to the jumps: the covariance of any two estimates is Σ_g change_g change_g′.
 
+    Attributes
+    ----------
+    names
+        The clusters' own codes, shape (G,), ascending: estimates that share clusters are matched by them.
+    plain, robust
+        Share of each cluster in the spread of (upper less lower level), plain and bias-corrected, shape (G, v), with
+        the factor of the variance taken in.
+    inside
+        Clusters inside the bandwidth.
+    """
+
+    names: Codes
+    plain: Matrix
+    robust: Matrix
+    inside: int
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class ClusterLadder:
+    """Both sides' sums by cluster, for one kernel and every order up to `order`; `names` are the clusters' codes."""
+
+    names: Codes
     sides: tuple[ClusterSums, ClusterSums]
     kernel: str
     order: int
@@ -193,10 +215,19 @@ class ClusterLadder:
             )
             for (name, side), code in zip(sample.sides, (codes[:split], codes[split:]))
         )
-        return cls(sides=(below, above), kernel=kernel, order=order)
+        return cls(names=names.astype(np.int64), sides=(below, above), kernel=kernel, order=order)
 
     def spread(self, bandwidths: Bandwidths, *, order: int, variance: str) -> ClusterSpread:
         """The clustered covariances at one pair of widths; `variance` is the study's word."""
+        found = self.changes(bandwidths, order=order, variance=variance)
+        return ClusterSpread(
+            covariance=np.asarray(found.plain.T @ found.plain),
+            robust_covariance=np.asarray(found.robust.T @ found.robust),
+            clusters=found.inside,
+        )
+
+    def changes(self, bandwidths: Bandwidths, *, order: int, variance: str) -> ClusterChanges:
+        """The clusters' shares in the spread at one pair of widths."""
         inside: list[Codes] = []
         plain: list[Matrix] = []
         robust: list[Matrix] = []
@@ -215,18 +246,16 @@ class ClusterLadder:
             plain.append(sign * levels[0])
             robust.append(sign * levels[1])
         clusters = len(np.union1d(*inside))
-        factor = (
+        factor = np.sqrt(
             (clusters - 1) / clusters
             if cluster_rule(variance) == "jackknife"
             else clusters / max(clusters - 1, 1)
         )
-
-        def covariance(changes: list[Matrix]) -> Matrix:
-            both = changes[0] + changes[1]
-            return np.asarray(factor * (both.T @ both))
-
-        return ClusterSpread(
-            covariance=covariance(plain), robust_covariance=covariance(robust), clusters=clusters
+        return ClusterChanges(
+            names=self.names,
+            plain=factor * (plain[0] + plain[1]),
+            robust=factor * (robust[0] + robust[1]),
+            inside=clusters,
         )
 
 

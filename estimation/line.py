@@ -11,7 +11,7 @@ from estimation.adjustment import adjusted
 from estimation.arrays import Codes, Vector
 from estimation.bandwidth import ScoreSpread, choose_bandwidths, rule_of_thumb_curvature
 from estimation.choices import Choices
-from estimation.cluster_ladder import ClusterLadder
+from estimation.cluster_ladder import ClusterChanges, ClusterLadder
 from estimation.errors import CannotEstimate
 from estimation.inference import critical_values, quantile
 from estimation.ladder import Ladder, LineFits, Widths
@@ -166,6 +166,10 @@ class Line:
 
     def fit(self, bandwidths: Bandwidths, *, adjust: bool = False) -> LineFit:
         """The fit at one pair of widths, with the study's variance, covariates taken off where asked."""
+        fit = self._raw_fit(bandwidths, adjust=adjust)
+        return adjusted(fit, 1 + int(self.fuzzy)) if adjust else fit
+
+    def _raw_fit(self, bandwidths: Bandwidths, *, adjust: bool) -> LineFit:
         sample, ladder, clusters = self.sample, self.ladder, self.clusters
         if adjust:
             if self.with_covariates is None or self.covariate_ladder is None:
@@ -186,7 +190,7 @@ class Line:
                 variance=self.choices.variance,
                 adjust=adjust,
             )
-        return adjusted(fit, 1 + int(self.fuzzy)) if adjust else fit
+        return fit
 
     def _clustered(self, fit: LineFit, clusters: ClusterLadder, bandwidths: Bandwidths) -> LineFit:
         spread = clusters.spread(bandwidths, order=self.choices.order, variance=self.choices.variance)
@@ -196,6 +200,22 @@ class Line:
             robust_covariance=spread.robust_covariance,
             clusters=spread.clusters,
         )
+
+    def cluster_changes(self, bandwidths: Bandwidths, *, adjust: bool = False) -> ClusterChanges | None:
+        """What each cluster does to the jump of the outcome (and of take-up); None without clusters.
+
+        Signed like the effect. With `adjust`, of the outcome less the covariates' part.
+        """
+        clusters = self.covariate_clusters if adjust else self.clusters
+        if clusters is None:
+            return None
+        found = clusters.changes(bandwidths, order=self.choices.order, variance=self.choices.variance)
+        targets, sign = 1 + int(self.fuzzy), self.sample.treated_sign
+        combine = np.eye(targets, found.plain.shape[1])
+        if adjust:
+            fit = self._raw_fit(bandwidths, adjust=True)
+            combine[:, targets:] = -fit.adjustment.T
+        return replace(found, plain=sign * found.plain @ combine.T, robust=sign * found.robust @ combine.T)
 
     def covariate_jumps(self, bandwidths: Bandwidths) -> tuple[Vector, Vector]:
         """Each covariate's jump at the line and its standard error, as if it were an outcome, shape (k,)."""
