@@ -20,6 +20,7 @@ from estimation.sample import Sample, build_sample, outward_order
 from estimation.variance import mass_point_starts
 from estimation.window import choose_window
 from study.assemble import Assigned, assemble
+from study.comparison import Comparison, compare
 from study.document import Study
 from study.errors import CANNOT_ESTIMATE, StudyError
 from study.result import OutcomeFailure, Result, adjust_for_many
@@ -227,6 +228,21 @@ class Workbench:
         )
         return estimate_effect(line, bandwidths, question)
 
+    def randomisation(self, outcome: str, site: str | None = None) -> Randomisation | str:
+        """The answer as if drawn by lot near the line, or the sentence that says why there is none."""
+        return self._randomisation(outcome, site)
+
+    def cutoff(self, site: str) -> float:
+        """The cutoff of a site, in units of the score."""
+        found = self._cutoff(site)
+        return float("nan") if found is None else found
+
+    def rows_with(self, outcome: str, site: str | None = None) -> tuple[int, int]:
+        """Assigned rows with the outcome known, below and above."""
+        column = self.assigned.outcomes[outcome]
+        lower, upper = self._outward(site)
+        return int(np.sum(~np.isnan(column[lower]))), int(np.sum(~np.isnan(column[upper])))
+
     def against_rule(self, site: str | None = None) -> AgainstRule | None:
         """Take-up against the rule, by side, among all assigned rows; None without a take-up column."""
         take_up = self.assigned.take_up
@@ -305,7 +321,16 @@ class Workbench:
             effects=tuple(effects),
             failures=tuple(failures),
             families=adjust_for_many(effects),
+            comparisons=self._comparisons(progress),
         )
+
+    def _comparisons(self, progress: Callable[[str], None] | None) -> tuple[Comparison, ...]:
+        found = []
+        for outcome in self.outcomes if self.sites else ():
+            if progress is not None:
+                progress(f"Comparing sites in {outcome}")
+            found.append(compare(self, outcome))
+        return tuple(found)
 
     @cached_property
     def _used(self) -> Mask:

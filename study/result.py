@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import math
 from collections.abc import Sequence
 from dataclasses import dataclass
 from typing import Any, Final
@@ -10,12 +9,14 @@ from typing import Any, Final
 import numpy as np
 
 from estimation.effect import Effect
-from estimation.inference import Interval
 from estimation.multiple import benjamini_hochberg, holm
 from estimation.randomisation import Randomisation
 from estimation.reading import Reading, TakeUp
 from study.assemble import Assigned
+from study.comparison import Comparison
+from study.comparison_document import comparisons_document
 from study.document import Study
+from study.result_parts import interval_document, number, randomisation_document
 
 FORMAT: Final = "cutbank-result"
 VERSION: Final = 1
@@ -51,6 +52,7 @@ class Result:
     effects: tuple[Effect, ...]
     failures: tuple[OutcomeFailure, ...]
     families: tuple[Family, ...]
+    comparisons: tuple[Comparison, ...] = ()
 
     def to_document(self) -> dict[str, Any]:
         """The result document; what can't be computed is None with a reason beside it."""
@@ -75,6 +77,7 @@ class Result:
                     for name, column in assigned.outcomes.items()
                 },
                 "fingerprint": assigned.fingerprint,
+                **({} if assigned.border is None else {"border_notes": list(assigned.border.notes)}),
             },
             "effects": [effect_document(effect) for effect in self.effects],
             "not_estimated": [
@@ -96,8 +99,8 @@ class Result:
                 }
                 for family in self.families
             ],
-            "comparison": None,
-            "comparison_reason": "this version does not yet compare lines with each other",
+            "comparison": comparisons_document(self.comparisons),
+            **({} if self.comparisons else {"comparison_reason": "the study has one line"}),
             "doubts": [],
             "doubts_reason": "this version does not yet ask the doubts",
             "guard": {
@@ -128,11 +131,6 @@ def adjust_for_many(effects: Sequence[Effect]) -> tuple[Family, ...]:
             for effect, own, held, found in zip(here, p, holm(p), benjamini_hochberg(p))
         ]
     return tuple(families)
-
-
-def number(value: float | None) -> float | None:
-    """A finite number at full precision, or None."""
-    return None if value is None or not math.isfinite(value) else float(value)
 
 
 def effect_document(effect: Effect) -> dict[str, Any]:
@@ -241,17 +239,6 @@ def reading_document(reading: Reading) -> dict[str, Any]:
     return document
 
 
-def interval_document(found: Interval) -> dict[str, Any]:
-    """An interval with its own centre."""
-    return {
-        "estimate": number(found.estimate),
-        "std_error": number(found.std_error),
-        "low": number(found.low),
-        "high": number(found.high),
-        "p_value": number(found.p_value),
-    }
-
-
 def take_up_document(take_up: TakeUp) -> dict[str, Any]:
     """The first stage; an infinite end of a set is None."""
     document: dict[str, Any] = {
@@ -278,24 +265,4 @@ def _randomisation(effect: Effect) -> dict[str, Any]:
     document = {"randomisation": randomisation_document(found)}
     if effect.without_slopes is not None:
         document["randomisation_without_slopes"] = randomisation_document(effect.without_slopes)
-    return document
-
-
-def randomisation_document(found: Randomisation) -> dict[str, Any]:
-    """The local randomisation answer; an end that too few assignments leave open is None with a reason."""
-    document = {
-        "window": [number(found.window[0]), number(found.window[1])],
-        "below": found.below,
-        "above": found.above,
-        "estimate": number(found.estimate),
-        "hodges_lehmann": number(found.hodges_lehmann),
-        "p_value": number(found.p_value),
-        "low": number(found.low),
-        "high": number(found.high),
-        "draws": found.draws,
-        "exact": found.exact,
-        "statistic": found.statistic,
-    }
-    if math.isinf(found.low) or math.isinf(found.high):
-        document["reason"] = "too few assignments are possible to close the interval"
     return document
