@@ -131,6 +131,21 @@ class Workbench:
         """Names of the sites, empty where the study has one line."""
         return self.assigned.site_names
 
+    def place(self, site: str | None) -> str:
+        """What an effect is about, as the result document names it."""
+        if site is not None:
+            return site
+        if self.assigned.border is not None:
+            return "along the border"
+        return "pooled" if self.sites else "at the cutoff"
+
+    def _kind(self, site: str | None) -> str:
+        if self.assigned.border is not None:
+            return "boundary" if site is None else "segment"
+        if site is not None:
+            return "step" if self.study.assignment.rule == "steps" else "site"
+        return "pooled" if self.sites else "cutoff"
+
     def line(self, outcome: str, site: str | None = None) -> Line:
         """The prepared line of an outcome, pooled over sites unless one is named.
 
@@ -210,9 +225,9 @@ class Workbench:
         pooled = bool(self.sites) and site is None
         question = Question(
             outcome=outcome,
-            where=site if site is not None else ("pooled" if pooled else "at the cutoff"),
-            kind="site" if site is not None else ("pooled" if pooled else "cutoff"),
-            cutoff=None if pooled else self._cutoff(site),
+            where=self.place(site),
+            kind=self._kind(site),
+            cutoff=None if pooled or self.assigned.border is not None else self._cutoff(site),
             randomisation=None if isinstance(randomised, str) else randomised,
             randomisation_reason=randomised if isinstance(randomised, str) else None,
             without_slopes=None
@@ -306,10 +321,12 @@ class Workbench:
                 try:
                     effects.append(self.effect(outcome, site=site))
                 except CannotEstimate as problem:
-                    where = site or ("pooled" if self.sites else "at the cutoff")
                     failures.append(
                         OutcomeFailure(
-                            outcome=outcome, where=where, sentence=problem.sentence, remedy=problem.remedy
+                            outcome=outcome,
+                            where=self.place(site),
+                            sentence=problem.sentence,
+                            remedy=problem.remedy,
                         )
                     )
         if not effects:

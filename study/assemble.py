@@ -12,6 +12,7 @@ import numpy as np
 
 from estimation.arrays import Codes, Mask, Vector
 from study.assembly_checks import require_rows, require_usable
+from study.border import Border, measure
 from study.document import Study
 from study.errors import BAD_DATA, BAD_STUDY, CANNOT_ESTIMATE, StudyError
 from study.literal import clean, nearest, quoted
@@ -27,6 +28,9 @@ REASONS: Final = (
     "missing weight",
     "weight not positive",
     "missing cluster",
+    "missing coordinates",
+    "beyond the reach",
+    "on the boundary, without a side",
 )
 
 
@@ -67,6 +71,9 @@ class Assigned:
         SHA-256 of the data file's bytes, in hexadecimal.
     row
         Shape (n,): the row's place in the file, from 0; not 0, 1, 2… where data.rows left rows out.
+    border
+        The boundary and every unit's place against it, where the rule is one; `position` is then the signed distance
+        in metres, positive on the treated side, and sites are segments of the border.
     """
 
     position: Vector
@@ -86,6 +93,7 @@ class Assigned:
     dropped: Mapping[str, int]
     fingerprint: str
     row: Codes
+    border: Border | None = None
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -96,6 +104,7 @@ class _Lines:
     site: Codes | None = None
     site_names: tuple[str, ...] = ()
     has_site: Mask | None = None
+    border: Border | None = None
 
 
 def assemble(study: Study, *, progress: Callable[[str], None] | None = None) -> Assigned:
@@ -115,10 +124,10 @@ def assemble(study: Study, *, progress: Callable[[str], None] | None = None) -> 
         a rule that is not estimated yet.
     """
     require_complete(study)
-    if study.assignment.rule in ("boundary", "frontier"):
+    if study.assignment.rule == "frontier":
         raise StudyError(
             f"{clean(study.path.name)}: this version does not estimate a {study.assignment.rule} yet.",
-            'Use the rule "cutoff" or "cutoffs".',
+            'Use the rule "cutoff", "cutoffs", "steps" or "boundary".',
             CANNOT_ESTIMATE,
         )
     report = progress or (lambda _: None)
@@ -126,9 +135,12 @@ def assemble(study: Study, *, progress: Callable[[str], None] | None = None) -> 
     parts = _read(study)
     report("Putting rows on their side of the line")
     require_rows(study, parts.rows)
-    assert study.columns.score is not None  # `require_complete` saw to it
-    score = parts.numbers[study.columns.score]
-    lines = _lines(study, parts, score)
+    if study.assignment.rule == "boundary":
+        score, lines = _against_the_boundary(study, parts, report)
+    else:
+        assert study.columns.score is not None  # `require_complete` saw to it
+        score = parts.numbers[study.columns.score]
+        lines = _lines(study, parts, score)
     assigned = _assigned(study, parts, score, lines, _fingerprint(study.data_file))
     require_usable(
         study, score, assigned.reason == 0, assigned.above, lines.site, lines.site_names, parts.numbers
@@ -151,7 +163,11 @@ def _read(study: Study) -> Parts:
     columns, rule = study.columns, study.assignment
     keys: dict[str, str] = {}  # the key that names each column
     named = [
-        ("columns.score", columns.score),
+        ("columns.score", None if rule.rule == "boundary" else columns.score),
+        ("columns.longitude", columns.longitude),
+        ("columns.latitude", columns.latitude),
+        ("columns.x", columns.x),
+        ("columns.y", columns.y),
         *(("columns.outcomes", name) for name in columns.outcomes),
         ("columns.take_up", columns.take_up),
         ("columns.weight", columns.weight),
@@ -163,6 +179,10 @@ def _read(study: Study) -> Parts:
             keys.setdefault(name, key)
     said = {
         "columns.score": "score",
+        "columns.longitude": "longitude",
+        "columns.latitude": "latitude",
+        "columns.x": "x",
+        "columns.y": "y",
         "columns.outcomes": "outcome",
         "columns.take_up": "take-up",
         "columns.weight": "weight",
@@ -204,6 +224,26 @@ def _lines(study: Study, parts: Parts, score: Vector) -> _Lines:
         site=recode[labels.codes],
         site_names=tuple(names[i] for i in kept),
         has_site=labels.codes >= 0,
+    )
+
+
+def _against_the_boundary(study: Study, parts: Parts, report: Callable[[str], None]) -> tuple[Vector, _Lines]:
+    """Signed distance in metres stands where a score would, its cutoff nought; segments stand where sites would."""
+    columns = study.columns
+    degrees = columns.longitude is not None
+    across, up = (
+        parts.numbers[name]
+        for name in ((columns.longitude, columns.latitude) if degrees else (columns.x, columns.y))
+        if name is not None
+    )
+    border = measure(study, across, up, degrees=degrees, report=report)
+    distance = border.located.distance_m
+    several = len(border.segment_names) > 1
+    return distance, _Lines(
+        cutoffs=np.broadcast_to(np.float64(0.0), distance.shape),
+        site=border.segment if several else None,
+        site_names=border.segment_names if several else (),
+        border=border,
     )
 
 
@@ -260,7 +300,7 @@ def _cutoffs_from_column(study: Study, labels: Labels, names: tuple[str, ...], c
 def _assigned(study: Study, parts: Parts, score: Vector, lines: _Lines, fingerprint: str) -> Assigned:
     columns = study.columns
     position = score - lines.cutoffs
-    above, treated = sides(position, study.assignment.treated)
+    above, treated = sides(position, "at or above" if lines.border else study.assignment.treated)
     weight = parts.numbers[columns.weight] if columns.weight else None
     cluster = parts.labels[columns.cluster].codes if columns.cluster else None
     reason = np.zeros(parts.rows, dtype=np.int64)
@@ -268,7 +308,12 @@ def _assigned(study: Study, parts: Parts, score: Vector, lines: _Lines, fingerpr
     def because(sentence: str, rows: Mask) -> None:
         reason[rows & (reason == 0)] = REASONS.index(sentence)
 
-    because("missing score", np.isnan(score))
+    if lines.border is not None:
+        because("missing coordinates", ~np.isfinite(lines.border.longitude))
+        because("beyond the reach", ~lines.border.within)
+        because("on the boundary, without a side", np.isnan(score))
+    else:
+        because("missing score", np.isnan(score))
     if lines.has_site is not None:
         because("missing site", ~lines.has_site)
         because("site without a cutoff", np.isnan(lines.cutoffs))
@@ -298,6 +343,7 @@ def _assigned(study: Study, parts: Parts, score: Vector, lines: _Lines, fingerpr
         dropped={REASONS[i]: int(counts[i]) for i in range(1, len(REASONS)) if counts[i]},
         fingerprint=fingerprint,
         row=parts.row,
+        border=lines.border,
     )
 
 

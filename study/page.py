@@ -8,6 +8,8 @@ import numpy as np
 
 from estimation.effect import Effect
 from study.analysis import Workbench
+from study.comparison import Comparison
+from study.comparison_words import opening, sentences, site_texts
 from study.disagreement import disagreement
 from study.figures import effect_picture, in_percent, table_lines
 from study.literal import clean
@@ -33,12 +35,23 @@ def result_lines(
     lines = [clean(study.title) or clean(study.path.name), ""]
     lines += _wrapped(rule_sentence(study), width)
     lines += _wrapped(_rows_sentence(result), width)
+    if result.assigned.border is not None:
+        for note in result.assigned.border.notes:
+            lines += _item(note, width)
+    compared = {one.outcome: one for one in result.comparisons}
+    told: set[str] = set()
     for effect in result.effects:
+        if effect.outcome in compared:
+            if effect.outcome not in told:
+                told.add(effect.outcome)
+                lines += ["", *_sites(compared[effect.outcome], result, width)]
+            if effect.kind in ("site", "step", "segment"):
+                continue  # one line of the table each; the document holds them in full
         lines.append("")
         lines += _wrapped(effect_sentence(effect, study), width)
         lines.append("")
         lines += _answers(effect, width)
-        if bench is not None and effect.kind != "site":
+        if bench is not None and effect.kind not in ("site", "segment", "step"):
             lines.append("")
             lines += _picture(effect, bench, width, plain)
         lines.append("")
@@ -47,6 +60,8 @@ def result_lines(
         for note in effect.notes:
             lines += _item(f"{'Caution: ' if note.severity == 'caution' else ''}{note.sentence}", width)
     for failure in result.failures:
+        if failure.outcome in compared and compared[failure.outcome].has(failure.where):
+            continue  # said beside its site
         lines.append("")
         lines += _wrapped(
             f"{clean(failure.outcome)} ({clean(failure.where)}) could not be estimated: {failure.sentence} "
@@ -111,6 +126,31 @@ def _answers(effect: Effect, width: int) -> list[str]:
         if row.reason is not None:
             fitted += ["", *_wrapped(f"{row.name}: {row.reason}", width)]
     return fitted
+
+
+def _sites(comparison: Comparison, result: Result, width: int) -> list[str]:
+    rows = site_texts(comparison)
+    head = ("", "cutoff", "effect", "from", "to", "at once", "", "drawn in", "rows", "share")
+    body = [
+        (
+            row.name,
+            row.cutoff,
+            row.estimate or "–",
+            row.low or "–",
+            row.high or "–",
+            row.band_low or "–",
+            row.band_high or "–",
+            row.shrunken or "–",
+            row.rows,
+            row.share,
+        )
+        for row in rows
+    ]
+    lines = _wrapped(opening(comparison, result.study), width)
+    lines += ["", *table_lines([head, *body], right=tuple(range(1, 10)), indent=0, gap=2), ""]
+    for sentence in sentences(comparison):
+        lines += _item(sentence, width)
+    return lines
 
 
 def _picture(effect: Effect, bench: Workbench, width: int, plain: bool) -> list[str]:

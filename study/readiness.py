@@ -84,6 +84,11 @@ def _gaps_of_a_boundary(study: Study) -> Iterator[tuple[str, str]]:
                 f"columns.{first} and columns.{second} go together, but one is missing.",
                 "Give both or neither.",
             )
+    if not any((columns.x, columns.y, columns.longitude, columns.latitude)):
+        yield (
+            'assignment.rule is "boundary", but no column holds coordinates.',
+            "Name columns.longitude and columns.latitude, or columns.x and columns.y.",
+        )
     if study.assignment.treated not in ("inside", "outside"):
         yield (
             f'assignment.rule is "boundary", but assignment.treated is {quoted(study.assignment.treated)}.',

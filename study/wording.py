@@ -179,9 +179,13 @@ def effect_sentence(effect: Effect, study: Study) -> str:
 
 def _where(effect: Effect, study: Study) -> str:
     score = clean(study.columns.score or "the score")
+    if effect.kind == "boundary":
+        return "Along the border"
+    if effect.kind == "segment":
+        return f"At {clean(effect.where)} of the border"
     if effect.kind == "pooled":
         return f"Over all sites, each at its own cutoff of {score}"
-    if effect.kind == "site":
+    if effect.kind in ("site", "step"):
         cutoff = "" if effect.cutoff is None else f" at {score} {width_text(effect.cutoff)}"
         return f"In {clean(effect.where)}{cutoff}"
     return f"At {score} {width_text(effect.cutoff)}" if effect.cutoff is not None else "At the line"
@@ -214,11 +218,14 @@ def _levels(effect: Effect, scale: float) -> str:
 
 def _basis(effect: Effect) -> str:
     reading, widths = effect.reading, effect.bandwidths
+    border = effect.kind in ("boundary", "segment")
+    low, high = ("on the other side", "on the treated side") if border else ("below", "above")
+    unit, line = (" m", "border") if border else ("", "line")
     if widths.below == widths.above:
-        near = f"within {width_text(widths.below)} of the line"
+        near = f"within {width_text(widths.below)}{unit} of the {line}"
     else:
-        near = f"within {width_text(widths.below)} below and {width_text(widths.above)} above the line"
-    rows = f"{plural(reading.count_below, 'row')} below and {reading.count_above:,} above"
+        near = f"within {width_text(widths.below)}{unit} {low} and {width_text(widths.above)}{unit} {high}"
+    rows = f"{plural(reading.count_below, 'row')} {low} and {reading.count_above:,} {high}"
     clusters = "" if reading.clusters is None else f" in {plural(reading.clusters, 'cluster')}"
     rule = {
         "mse": "the MSE-optimal width",

@@ -264,14 +264,14 @@ def test_a_condition_keeps_each_rows_place_in_the_file(study: Study) -> None:
         ),
         (
             {"assignment.rule": "boundary", "assignment.treated": "inside", "assignment.area.path": "z.gpkg"},
-            "study.toml: this version does not estimate a boundary yet.",
-            'Use the rule "cutoff" or "cutoffs".',
-            1,
+            'study.toml: assignment.rule is "boundary", but no column holds coordinates.',
+            "Name columns.longitude and columns.latitude, or columns.x and columns.y.",
+            2,
         ),
         (
             {"assignment.rule": "frontier", "assignment.frontier.all": {"darkness": 1.0, "visits": 2.0}},
             "study.toml: this version does not estimate a frontier yet.",
-            'Use the rule "cutoff" or "cutoffs".',
+            'Use the rule "cutoff", "cutoffs", "steps" or "boundary".',
             1,
         ),
         ({"columns.score": None}, "study.toml: columns.score is missing.",
