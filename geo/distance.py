@@ -6,7 +6,7 @@ import os
 from collections.abc import Callable
 from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass
-from typing import Final, Literal
+from typing import Any, Final, Literal
 
 import numpy as np
 import shapely
@@ -117,8 +117,7 @@ def locate(
         tolerance = _ON_LINE_SHARE * boundary.extent if boundary.is_plain else _ON_LINE_M
     located = _blank(len(longitude), reach_m)
     if boundary.area is not None:
-        shapely.prepare(boundary.area)
-        shapely.contains_xy(boundary.area, 0.0, 0.0)  # builds its index now, before threads ask
+        _make_ready(boundary.area)
     sign = 1 if treated in ("inside", "left") else -1
     starts = range(0, len(longitude), _CHUNK)
 
@@ -134,6 +133,17 @@ def locate(
             if report is not None:
                 report(done, len(longitude))
     return located
+
+
+def _make_ready(area: Any) -> None:
+    """Build the index that answers who is inside, before threads ask.
+
+    It is built by the second question that the area's box can't answer (the first is answered without one), and two
+    threads that build it at once break the process. So several questions are put within the box.
+    """
+    left, low, right, top = area.bounds
+    shapely.prepare(area)
+    shapely.contains_xy(area, np.full(8, (left + right) / 2.0), np.full(8, (low + top) / 2.0))
 
 
 def _check(latitude: Vector, boundary: Boundary, reach_m: float, treated: str) -> None:

@@ -2,6 +2,9 @@
 
 from __future__ import annotations
 
+import subprocess
+import sys
+
 import numpy as np
 import pytest
 import shapely
@@ -211,6 +214,26 @@ def test_chunks_give_the_same_as_one_go(monkeypatch) -> None:
     )
     np.testing.assert_array_equal(apart.distance_m, together)
     assert told == [(min(700 * i, 5000), 5000) for i in range(1, 9)]
+
+
+def test_threads_never_build_the_index_of_the_area_together(repository) -> None:
+    """Two that do break the process, so it is asked in one of its own: with fewer questions beforehand it aborts."""
+    code = """
+import numpy as np, shapely, geo.distance
+from geo.outline import boundary_of_area
+geo.distance._CHUNK = 500
+turn = np.linspace(0.0, 6.28, 40_000)
+circle = np.column_stack((np.cos(turn), np.sin(turn)))
+x, y = np.random.default_rng(0).uniform(-0.6, 0.6, (2, 2000))
+for size in range(1, 41):
+    boundary = boundary_of_area(np.array([shapely.Polygon(size * circle)], dtype=object), crs="plain", gap=0.0)
+    located = geo.distance.locate(size * x, size * y, boundary=boundary, reach_m=1e-3)
+    assert located.side.min() == 1
+"""
+    done = subprocess.run(
+        [sys.executable, "-c", code], cwd=repository, capture_output=True, text=True, check=False
+    )
+    assert (done.returncode, done.stderr) == (0, "")
 
 
 def test_a_stop_is_obeyed() -> None:
