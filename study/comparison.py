@@ -158,6 +158,10 @@ class Comparison:
     kind: str
     binary: bool
 
+    def has(self, name: str) -> bool:
+        """Whether a site of that name is among the rows."""
+        return any(row.name == name for row in self.rows)
+
     @property
     def not_estimated(self) -> tuple[SiteRow, ...]:
         """Sites without an estimate of their own."""

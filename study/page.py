@@ -183,6 +183,7 @@ def _families(result: Result, width: int) -> list[str]:
     rows += [
         (clean(f.outcome), clean(f.where), p_text(f.p_value), p_text(f.holm), p_text(f.benjamini_hochberg))
         for f in result.families
+        if not any(one.has(f.where) for one in result.comparisons)
     ]
     return [
         *_wrapped(
