@@ -4,6 +4,8 @@ from __future__ import annotations
 
 from typing import Final, Literal
 
+from estimation.errors import CannotEstimate
+
 Status = Literal[1, 2, 3]
 
 CANNOT_ESTIMATE: Final = 1  # the study could not be estimated
@@ -26,10 +28,31 @@ class StudyError(Exception):
     """
 
     def __init__(self, what: str, do: str, status: Status = BAD_STUDY) -> None:
-        super().__init__(what, do, status)
+        Exception.__init__(self, what, do, status)  # not super(): `Masked` has two parents
         self.what = what
         self.do = do
         self.status = status
 
     def __str__(self) -> str:
         return f"{self.what}\n{self.do}"
+
+
+class Masked(StudyError, CannotEstimate):
+    """An effect or a level of an outcome was asked for before the plan is sealed.
+
+    It is a `CannotEstimate` too, so that whoever lists what could not be estimated says this sentence in its place.
+    """
+
+    def __init__(self, outcome: str) -> None:
+        what = f"{outcome} is masked until the plan is sealed: its effects and levels stay hidden."
+        StudyError.__init__(
+            self,
+            what,
+            "Seal the plan with: cutbank seal STUDY (or set masked = false under [study]).",
+            CANNOT_ESTIMATE,
+        )
+        self.sentence = self.what
+        self.remedy = self.do
+
+    def __str__(self) -> str:
+        return StudyError.__str__(self)
