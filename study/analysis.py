@@ -22,7 +22,9 @@ from estimation.window import choose_window
 from study.assemble import Assigned, assemble
 from study.comparison import Comparison, compare
 from study.document import Study
-from study.errors import CANNOT_ESTIMATE, StudyError
+from study.errors import CANNOT_ESTIMATE, Masked, StudyError
+from study.literal import clean
+from study.plan import is_masked
 from study.result import OutcomeFailure, Result, adjust_for_many
 
 NEAREST_FOR_WINDOW: Final = 50_000
@@ -89,6 +91,7 @@ class Workbench:
     def __init__(self, study: Study, assigned: Assigned, kept: Workbench | None = None) -> None:
         self.study = study
         self.assigned = assigned
+        self.masked = is_masked(study)  # asked once: a seal that comes later makes a new bench
         self._orders: dict[str | None, tuple[Codes, Codes]] = {} if kept is None else kept._orders
         self._samples: dict[tuple[str, str | None, tuple[str, ...]], Sample] = (
             {} if kept is None else kept._samples
@@ -149,11 +152,24 @@ class Workbench:
     def line(self, outcome: str, site: str | None = None) -> Line:
         """The prepared line of an outcome, pooled over sites unless one is named.
 
+        Every effect and level comes through here, so that this is where a masked outcome is refused.
+
         Raises
         ------
+        Masked
+            Until the plan is sealed.
         CannotEstimate
             When a side holds no row.
         """
+        self._refuse_masked(outcome)
+        return self._line(outcome, site)
+
+    def _refuse_masked(self, outcome: str) -> None:
+        if self.masked:
+            raise Masked(clean(outcome))
+
+    def _line(self, outcome: str, site: str | None = None) -> Line:
+        """The line, masked or not: for widths and counts, which show no level and no effect."""
         choices = self.study.estimate
         covariates = self.study.columns.covariates
         need = _Need(outcome, site, choices.kernel, choices.order, choices.donut, covariates)
@@ -161,23 +177,39 @@ class Workbench:
         if line is None:
             full = self._sample(outcome, site, covariates) if covariates else None
             line = Line.prepare(self._sample(outcome, site, ()), choices, with_covariates=full)
+            line = replace(line, cap=self._cap(site))
             self._lines[need] = line
         return line if line.choices == choices else line.choosing(choices)
+
+    def _cap(self, site: str | None) -> tuple[float, float]:
+        """Largest widths (below, above): with steps on one score, half-way to the next, so that no row serves two.
+
+        Pooled over steps it is the nearest half-way of all, beyond which some steps have rows and others none.
+        """
+        steps = np.array(self.study.assignment.steps)
+        if self.study.assignment.rule != "steps" or len(steps) < 2:
+            return (np.inf, np.inf)
+        half = np.diff(steps) / 2.0
+        if site is None:
+            return (float(half.min()), float(half.min()))
+        around = np.concatenate(([np.inf], half, [np.inf]))
+        place = int(np.argmin(np.abs(steps - self.cutoff(site))))
+        return (float(around[place]), float(around[place + 1]))
 
     def chosen(self, outcome: str, site: str | None = None) -> Bandwidths:
         """The bandwidths that the study asks for."""
         key = (outcome, site)
         if key not in self._chosen:
-            self._chosen[key] = self.line(outcome, site).bandwidths()
+            self._chosen[key] = self._line(outcome, site).bandwidths()
         return self._chosen[key]
 
     def widest(self, outcome: str, site: str | None = None) -> float:
         """The largest |score − cutoff| among the rows of an outcome."""
-        return self.line(outcome, site).sample.widest
+        return self._line(outcome, site).sample.widest
 
     def quick(self, outcome: str, site: str | None = None) -> bool:
         """Whether a reading comes at once, whatever the rows: cheap enough for every key."""
-        return self.line(outcome, site).on_ladder
+        return self._line(outcome, site).on_ladder
 
     def reading(self, outcome: str, bandwidth: float | Bandwidths, site: str | None = None) -> Reading:
         """The effect at one width."""
@@ -245,6 +277,7 @@ class Workbench:
 
     def randomisation(self, outcome: str, site: str | None = None) -> Randomisation | str:
         """The answer as if drawn by lot near the line, or the sentence that says why there is none."""
+        self._refuse_masked(outcome)
         return self._randomisation(outcome, site)
 
     def cutoff(self, site: str) -> float:
@@ -309,8 +342,9 @@ class Workbench:
         Raises
         ------
         StudyError
-            When no effect of the study can be estimated.
+            When no effect of the study can be estimated, as none can while its outcomes are masked.
         """
+        self._refuse_masked(", ".join(self.outcomes))
         effects: list[Effect] = []
         failures: list[OutcomeFailure] = []
         questions: Sequence[str | None] = (*self.sites, None)
@@ -441,6 +475,8 @@ class Workbench:
         rows = np.concatenate([side[:NEAREST_FOR_WINDOW] for side in self._outward(site)])
         rows = rows[np.abs(a.position[rows]) >= choices.donut]
         known = rows[~np.isnan(a.outcomes[outcome][rows])]
+        if a.take_up is not None:
+            known = known[~np.isnan(a.take_up[known])]
         return randomise(
             position=a.position[known],
             outcome=a.outcomes[outcome][known],
@@ -450,4 +486,5 @@ class Workbench:
             level=choices.level,
             seed=self.study.seed,
             slope=slope,
+            take_up=None if a.take_up is None else a.take_up[known],
         )
