@@ -90,6 +90,8 @@ class Line:
         What the first bandwidth needs of the scores.
     clusters, covariate_clusters
         Sums by cluster of either sample; None without clusters.
+    cap
+        Largest width (below, above), where rows further out belong to another line: half-way to the next step.
     """
 
     sample: Sample
@@ -101,6 +103,7 @@ class Line:
     covariate_ladder: Ladder | None = None
     clusters: ClusterLadder | None = None
     covariate_clusters: ClusterLadder | None = None
+    cap: tuple[float, float] = (np.inf, np.inf)
 
     @classmethod
     def prepare(cls, sample: Sample, choices: Choices, with_covariates: Sample | None = None) -> Line:
@@ -151,12 +154,22 @@ class Line:
 
     def bandwidths(self) -> Bandwidths:
         """What the choices ask for; covariates never move it."""
-        return choose_bandwidths(self.ladder, self.spread, self.choices)
+        return self._capped(choose_bandwidths(self.ladder, self.spread, self.choices))
 
     def at(self, bandwidth: float) -> Bandwidths:
         """One width for both sides, with the pilot that the choices ask for."""
         pilot = self._fixed_pilot()
-        return Bandwidths.common(bandwidth, pilot)
+        return self._capped(Bandwidths.common(bandwidth, pilot))
+
+    def _capped(self, widths: Bandwidths) -> Bandwidths:
+        below, above = self.cap
+        return replace(
+            widths,
+            below=min(widths.below, below),
+            above=min(widths.above, above),
+            pilot_below=min(widths.pilot_below, below),
+            pilot_above=min(widths.pilot_above, above),
+        )
 
     def _fixed_pilot(self) -> float | None:
         """The pilot where it does not follow the bandwidth."""
@@ -254,7 +267,14 @@ class Line:
             Asked between widths where each costs a pass over rows; the rest stay NaN once it answers True.
         """
         if self.on_ladder and self.clusters is None and not self.fuzzy and not self.choices.adjust:
-            fits = self.ladder.fits(Widths.common(bandwidth, self._fixed_pilot()), order=self.choices.order)
+            asked = Widths.common(bandwidth, self._fixed_pilot())
+            widths = Widths(
+                below=np.minimum(asked.below, self.cap[0]),
+                above=np.minimum(asked.above, self.cap[1]),
+                pilot_below=np.minimum(asked.pilot_below, self.cap[0]),
+                pilot_above=np.minimum(asked.pilot_above, self.cap[1]),
+            )
+            fits = self.ladder.fits(widths, order=self.choices.order)
             return self._sweep_from(bandwidth, fits)
         rows = np.full((4, len(bandwidth)), np.nan)
         counts = np.zeros((2, len(bandwidth)), dtype=np.int64)

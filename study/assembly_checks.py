@@ -9,7 +9,7 @@ import numpy as np
 from estimation.arrays import Codes, Mask, Vector
 from study.document import Study
 from study.errors import BAD_DATA, BAD_STUDY, StudyError
-from study.literal import clean, quoted
+from study.literal import clean, nearest, quoted
 
 
 def require_rows(study: Study, rows: int) -> None:
@@ -68,6 +68,15 @@ def require_usable(
             BAD_DATA,
         )
     _require_cutoffs_in_range(study, score, used, site, site_names)
+    for name in study.assignment.site_weights:
+        if name not in site_names:
+            near = nearest(name, site_names)
+            raise StudyError(
+                f"{clean(study.path.name)}: assignment.site_weights names {quoted(name)}, which is no site with a cutoff "
+                "and rows.",
+                f"Did you mean {quoted(near)}?" if near else "Correct the name, or take it out.",
+                BAD_STUDY,
+            )
     for side, rows in (("below", used & ~above), ("above", used & above)):
         if not rows.any():
             raise StudyError(

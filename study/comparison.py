@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Mapping
+from collections.abc import Callable
 from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING, TypeVar
 
@@ -10,28 +10,12 @@ import numpy as np
 
 from estimation.arrays import Codes, Vector
 from estimation.errors import CannotEstimate
-from estimation.inference import Interval
 from estimation.line_fit import Bandwidths
 from estimation.line_shares import shares_at_line
-from estimation.multiple import holm
-from estimation.pooling import (
-    Heterogeneity,
-    Mean,
-    RandomEffects,
-    SiteEstimates,
-    Trend,
-    Without,
-    heterogeneity,
-    leave_one_out,
-    random_effects,
-    require_sites,
-    trend_in,
-    weighted_mean,
-)
 from estimation.randomisation import Randomisation
 from estimation.reading import Reading
-from estimation.shared_clusters import ClusterShares, joint_covariance, shares_of_jump, shares_of_ratio
-from estimation.simultaneous import Band, JointTest, joint_test, simultaneous_band
+from estimation.shared_clusters import ClusterShares, shares_of_jump, shares_of_ratio
+from study.sites_together import Together, put_together
 
 if TYPE_CHECKING:
     from study.analysis import Workbench
@@ -58,6 +42,8 @@ class SiteRow:
     weight
         Its weight in the pooled effect: the share, for a fuzzy study times its jump in take-up, over all; None where
         it has no estimate of its own or the pooled effect none.
+    dose
+        By how much the programme grows at this step; None where the study names no doses.
     """
 
     name: str
@@ -72,54 +58,12 @@ class SiteRow:
     randomisation_reason: str | None = None
     share: float | None = None
     weight: float | None = None
+    dose: float | None = None
 
     @property
     def estimated(self) -> bool:
         """Whether the site has an estimate with a spread, so that it takes part in what sites say together."""
         return self.reading is not None
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class Together:
-    """What the bias-corrected effects of the sites say together.
-
-    Attributes
-    ----------
-    names
-        Sites that take part, in the order of every vector here.
-    estimates
-        Their robust centres, errors and joint covariance.
-    independent
-        Whether no cluster serves two sites.
-    inverse_variance, equal, stated
-        Means of these sites' effects by each weighting; `stated` by the weights that the study names.
-    spread, random, trend, without, band, joint, holm
-        Heterogeneity, random effects, trend in the cutoff, leaving one out, simultaneous band, joint test, adjusted
-        p-values; None where it can't be had, and then `reasons` holds the sentence by the attribute's name.
-    """
-
-    names: tuple[str, ...]
-    estimates: SiteEstimates
-    inverse_variance: Mean | None
-    equal: Mean | None
-    stated: Mean | None
-    spread: Heterogeneity | None
-    random: RandomEffects | None
-    trend: Trend | None
-    without: tuple[Without, ...] | None
-    band: Band | None
-    joint: JointTest | None
-    holm: Vector
-    reasons: Mapping[str, str]
-
-    @property
-    def independent(self) -> bool:
-        """Whether sites share no cluster."""
-        return self.estimates.covariance is None
-
-    def place(self, name: str) -> int | None:
-        """A site's place in the vectors, or None where it takes no part."""
-        return self.names.index(name) if name in self.names else None
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -134,6 +78,8 @@ class Comparison:
         What they say together, of the headline effect; for a fuzzy study the ratio.
     intention
         The same of the jump in the outcome itself; None for a sharp study.
+    per_dose
+        The same of the effects divided by how much the programme grows at each step; None without doses.
     pooled, pooled_bandwidths
         The pooled effect over normalised scores; None where it can't be had, then `pooled_reason` says why.
     level
@@ -150,6 +96,7 @@ class Comparison:
     rows: tuple[SiteRow, ...]
     together: Together
     intention: Together | None
+    per_dose: Together | None
     pooled: Reading | None
     pooled_bandwidths: Bandwidths | None
     pooled_reason: str | None
@@ -211,11 +158,16 @@ def compare(
     shares = None if widths is None else _shares(bench, outcome, widths)
     rows = _weighed([site.row for site in sites], shares)
     fuzzy = bench.assigned.take_up is not None
+    shared = [site.ratio if fuzzy else site.jump for site in sites]
+    doses = _doses(bench)
+    if doses:
+        rows = tuple(replace(row, dose=dose) for row, dose in zip(rows, doses))
     return Comparison(
         outcome=outcome,
         rows=rows,
-        together=_together(bench, rows, [site.ratio if fuzzy else site.jump for site in sites], sharp=False),
-        intention=_together(bench, rows, [site.jump for site in sites], sharp=True) if fuzzy else None,
+        together=put_together(bench, rows, shared, sharp=False),
+        intention=put_together(bench, rows, [site.jump for site in sites], sharp=True) if fuzzy else None,
+        per_dose=put_together(bench, rows, shared, sharp=False, by_dose=True) if doses else None,
         pooled=pooled,
         pooled_bandwidths=widths,
         pooled_reason=reason,
@@ -314,91 +266,16 @@ def _weighed(rows: list[SiteRow], shares: Vector | None) -> tuple[SiteRow, ...]:
     )
 
 
-def _robust(reading: Reading, sharp: bool) -> Interval:
-    return reading.intention.robust if sharp and reading.intention is not None else reading.robust
-
-
-def _together(
-    bench: Workbench, rows: tuple[SiteRow, ...], shares: list[ClusterShares | None], *, sharp: bool
-) -> Together:
-    """All that the estimated sites say together; each part that can't be had is None with its reason."""
-    part = [i for i, row in enumerate(rows) if row.reading is not None]
-    found = [_robust(row.reading, sharp) for row in rows if row.reading is not None]
-    usable = [j for j, one in enumerate(found) if np.isfinite(one.estimate) and one.std_error > 0.0]
-    part, found = [part[j] for j in usable], [found[j] for j in usable]
-    estimates = _estimates(found, [shares[i] for i in part])
-    clusters = [row.reading.clusters for row in (rows[i] for i in part) if row.reading is not None]
-    degrees = np.array([np.nan if count is None else max(count - 1.0, 1.0) for count in clusters])
-    level, seed = bench.study.estimate.level, bench.study.seed
-    reasons: dict[str, str] = {}
-
-    def attempt(name: str, work: Callable[[], Found]) -> Found | None:
-        try:
-            return work()
-        except CannotEstimate as problem:
-            reasons[name] = problem.sentence
-            return None
-
-    def mean(weights: Vector) -> Callable[[], Mean]:
-        def work() -> Mean:
-            require_sites(estimates, 1, "A mean over sites")
-            return weighted_mean(estimates, weights, level=level)
-
-        return work
-
-    spread = attempt("spread", lambda: heterogeneity(estimates))
-    cutoffs = np.array([rows[i].cutoff for i in part])
-    return Together(
-        names=tuple(rows[i].name for i in part),
-        estimates=estimates,
-        inverse_variance=attempt("inverse_variance", mean(1.0 / estimates.variance)),
-        equal=attempt("equal", mean(np.ones(len(part)))),
-        stated=None,
-        spread=spread,
-        random=None if spread is None else random_effects(estimates, spread.tau2, level=level),
-        trend=attempt("trend", lambda: trend_in(cutoffs, estimates, level=level)),
-        without=attempt("without", lambda: _without(estimates, level)),
-        band=simultaneous_band(estimates, level=level, seed=seed, degrees=degrees) if part else None,
-        joint=attempt("joint", lambda: _joint(estimates)),
-        holm=holm(np.array([one.p_value for one in found])),
-        reasons=reasons,
-    )
-
-
-def _estimates(found: list[Interval], shares: list[ClusterShares | None]) -> SiteEstimates:
-    """The estimates with their joint covariance where sites share clusters."""
-    estimate = np.array([one.estimate for one in found])
-    error = np.array([one.std_error for one in found])
-    known = [share for share in shares if share is not None]
-    if not known:
-        return SiteEstimates(estimate=estimate, std_error=error)
-    covariance, clusters = joint_covariance(known)
-    # Clusters that keep to one site leave the sites independent.
-    apart = not np.any(covariance[~np.eye(len(known), dtype=bool)])
-    return SiteEstimates(
-        estimate=estimate,
-        std_error=error,
-        covariance=None if apart else covariance,
-        degrees=float(max(clusters - 1, 1)),
-    )
-
-
-# Sites beyond which dependent ones are not left out one at a time: each takes a pass over the joint covariance.
-_MOST_LEFT_OUT = 400
-
-
-def _without(estimates: SiteEstimates, level: float) -> tuple[Without, ...]:
-    if estimates.covariance is not None and len(estimates) > _MOST_LEFT_OUT:
-        raise CannotEstimate(
-            f"Leaving out one of {len(estimates):,} sites that share clusters takes too long.",
-            "Compare fewer sites.",
-        )
-    return leave_one_out(estimates, level=level)
-
-
-def _joint(estimates: SiteEstimates) -> JointTest:
-    require_sites(estimates, 1, "A test of all effects at once")
-    return joint_test(estimates)
+def _doses(bench: Workbench) -> tuple[float, ...]:
+    """By how much the programme grows at each step, in the order of the sites; empty without doses."""
+    rule = bench.study.assignment
+    if rule.rule != "steps" or not rule.doses:
+        return ()
+    grows = np.diff(np.array(rule.doses), prepend=0.0)
+    # Doses are listed as a row meets the steps: from below where the upper side is treated, else from above.
+    in_order = grows if bench.assigned.treated == "above" else grows[::-1]
+    of_step = dict(zip((f"{step:g}" for step in rule.steps), in_order))
+    return tuple(float(of_step[name]) for name in bench.sites)
 
 
 def order_of(comparison: Comparison, by: str) -> Codes:

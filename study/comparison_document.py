@@ -7,8 +7,9 @@ from typing import Any
 
 from estimation.inference import Interval
 from estimation.pooling import Mean
-from study.comparison import Comparison, SiteRow, Together
+from study.comparison import Comparison, SiteRow
 from study.result_parts import interval_document, number, randomisation_document
+from study.sites_together import Together
 
 
 def comparisons_document(comparisons: Sequence[Comparison]) -> dict[str, Any] | None:
@@ -35,6 +36,19 @@ def comparison_document(comparison: Comparison) -> dict[str, Any]:
             {"site": row.name, "reason": row.reason, "remedy": row.remedy} for row in comparison.not_estimated
         ],
     }
+    if comparison.per_dose is not None:
+        document["per_dose"] = {
+            "means": _means(comparison.per_dose),
+            **_together(comparison.per_dose),
+            "effects": [
+                {"step": name, "estimate": number(float(value)), "std_error": number(float(error))}
+                for name, value, error in zip(
+                    comparison.per_dose.names,
+                    comparison.per_dose.estimates.estimate,
+                    comparison.per_dose.estimates.std_error,
+                )
+            ],
+        }
     if comparison.intention is not None:
         document["weights_in_the_ratio"] = {row.name: number(row.weight) for row in comparison.rows}
         document["intention"] = {
@@ -69,11 +83,11 @@ def _means(together: Together) -> dict[str, Any]:
     reasons = {
         "inverse_variance": together.reasons.get("inverse_variance"),
         "equal": together.reasons.get("equal"),
-        "stated": together.reasons.get("stated"),
+        "stated": "the study states no weights for sites that have an estimate",
         "random_effects": together.reasons.get("spread"),
     }
     for name, value in reasons.items():
-        if document[name] is None:
+        if document[name] is None and (value or name == "stated"):
             document[f"{name}_reason"] = value
     return document
 
@@ -153,6 +167,8 @@ def _site(comparison: Comparison, row: SiteRow) -> dict[str, Any]:
         if row.randomisation is None:
             document["randomisation_reason"] = row.randomisation_reason
         return document
+    if row.dose is not None:
+        document["dose"] = number(row.dose)
     document["estimate"] = number(row.reading.estimate)
     document["std_error"] = number(row.reading.std_error)
     document["robust"] = interval_document(row.reading.robust)
@@ -162,6 +178,11 @@ def _site(comparison: Comparison, row: SiteRow) -> dict[str, Any]:
     if i is None:
         return document
     document["holm"] = number(float(together.holm[i]))
+    document["weight_by_precision"] = (
+        None if together.inverse_variance is None else number(float(together.inverse_variance.weights[i]))
+    )
+    if together.stated is not None:
+        document["weight_stated"] = number(float(together.stated.weights[i]))
     if together.random is not None:
         shrunken = together.random.shrunken
         document["shrunken"] = {

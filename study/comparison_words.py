@@ -8,9 +8,10 @@ import numpy as np
 
 from estimation.effect import FEW_CLUSTERS
 from estimation.inference import Interval
-from study.comparison import Comparison, SiteRow, Together, order_of
+from study.comparison import Comparison, SiteRow, order_of
 from study.document import Study
 from study.literal import clean
+from study.sites_together import Together
 from study.wording import MINUS, TIE, figure, p_text, percent, width_text
 
 
@@ -130,6 +131,7 @@ def sentences(comparison: Comparison) -> tuple[str, ...]:
     said = [*_spread(comparison), *_means(comparison), *_trend(comparison), *_left_out(comparison)]
     if comparison.intention is not None:
         said += _intention(comparison)
+    said += _per_dose(comparison)
     said += _joint(comparison)
     said += [_unestimated(comparison, row) for row in comparison.not_estimated]
     said += _weak(comparison)
@@ -224,6 +226,24 @@ def _intention(comparison: Comparison) -> list[str]:
         f"The jumps in the outcome itself average {_reach(intention.random.mean.found, scale)} "
         f"(Q = {spread.q:.1f} on {spread.df}, {p_text(spread.p_value)}; I² {100 * spread.i2:.0f}{TIE}%)."
     ]
+
+
+def _per_dose(comparison: Comparison) -> list[str]:
+    per, scale = comparison.per_dose, scale_of(comparison)
+    if per is None or per.inverse_variance is None:
+        return []
+    each = "; ".join(
+        f"{clean(name)}: {figure(scale * value, scale * error, sign=True)}"
+        for name, value, error in zip(per.names, per.estimates.estimate, per.estimates.std_error)
+    )
+    said = f"For each unit of dose the effect is {_reach(per.inverse_variance.found, scale)} by precision ({each})"
+    if per.spread is not None:
+        alike = per.spread.p_value >= 1.0 - comparison.level
+        said += (
+            f"; that every unit does the same is {'not spoken against' if alike else 'spoken against'} "
+            f"({p_text(per.spread.p_value)})"
+        )
+    return [said + "."]
 
 
 def _joint(comparison: Comparison) -> list[str]:

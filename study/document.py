@@ -84,8 +84,10 @@ class Assignment:
     treated: str = "at or above"
     cutoff: float | None = None
     steps: tuple[float, ...] = ()
+    doses: tuple[float, ...] = ()
     cutoff_column: str | None = None
     sites: Mapping[str, float] = field(default_factory=dict)
+    site_weights: Mapping[str, float] = field(default_factory=dict)
     area: Area | None = None
     frontier: Frontier | None = None
 

@@ -190,6 +190,13 @@ OPTIONS: Final[tuple[Option, ...]] = (
     ),
     Option(
         section="assignment",
+        key="doses",
+        kind="number list",
+        default=(),
+        help="How much is handed out past each step, from the first that a row meets: ascending, one for each step.",
+    ),
+    Option(
+        section="assignment",
         key="cutoff_column",
         kind="text",
         help="A column that holds each row's cutoff.",
@@ -200,6 +207,14 @@ OPTIONS: Final[tuple[Option, ...]] = (
         kind="number table",
         default={},
         help="Each site's own cutoff.",
+    ),
+    Option(
+        section="assignment",
+        key="site_weights",
+        kind="number table",
+        default={},
+        least=0.0,
+        help="How much each site counts in a mean of the study's own; a site that is not named counts nothing.",
     ),
     Option(
         section="assignment.area", key="path", kind="text", help="The file that holds the boundary's area."

@@ -64,6 +64,16 @@ def _gaps_of_the_rule(study: Study) -> Iterator[tuple[str, str]]:
                     'assignment.rule is "steps", but fewer than two cutoffs are given.',
                     'List them in assignment.steps, or set assignment.rule to "cutoff".',
                 )
+            if rule.doses and len(rule.doses) != len(rule.steps):
+                yield (
+                    f"assignment.doses has {len(rule.doses)} entries for {len(rule.steps)} steps.",
+                    "Give one dose for each step, or take the doses out.",
+                )
+            if rule.doses and rule.doses[0] <= 0.0:
+                yield (
+                    f"assignment.doses starts with {rule.doses[0]:g}, but every step hands something out.",
+                    "Give doses above nought, ascending from the first step that a row meets.",
+                )
         case "boundary":
             yield from _gaps_of_a_boundary(study)
         case "frontier":

@@ -54,7 +54,7 @@ def value_of(option: Option) -> st.SearchStrategy[object]:
         "word, number or pair": st.sampled_from(option.allowed or ("",)) | number | st.tuples(number, number),
         "text list": st.lists(names, unique=True, max_size=4).map(tuple),
         "number list": st.lists(finite, unique=True, max_size=4).map(lambda found: tuple(sorted(found))),
-        "number table": st.dictionaries(names, finite, max_size=4),
+        "number table": st.dictionaries(names, number, max_size=4),
         "whole number or text": st.integers(1, 99) | names,
     }[option.kind]
 

@@ -12,6 +12,7 @@ from study.analysis import Workbench
 from study.comparison import compare, order_of
 from study.comparison_words import sentences, site_texts
 from study.document import Study, edit, load_study
+from study.errors import StudyError
 from study.page import result_lines
 
 STUDY = """
@@ -247,3 +248,21 @@ def test_one_line_has_no_comparison(tmp_path: Path) -> None:
     document = Workbench.open(study).run().to_document()
     assert document["comparison"] is None
     assert document["comparison_reason"] == "the study has one line"
+
+
+def test_a_mean_by_the_studys_own_weights(tmp_path: Path) -> None:
+    study = edit(load_study(write(tmp_path)), {"assignment.site_weights": {"Arl": 3.0, "Dun": 1.0}})
+    found = compare(Workbench.open(study), "rides").together
+    assert found.stated is not None
+    y = dict(zip(found.names, found.estimates.estimate))
+    v = dict(zip(found.names, found.estimates.variance))
+    assert found.stated.found.estimate == pytest.approx(0.75 * y["Arl"] + 0.25 * y["Dun"], rel=1e-12)
+    assert found.stated.found.std_error == pytest.approx(
+        np.sqrt(0.5625 * v["Arl"] + 0.0625 * v["Dun"]), rel=1e-12
+    )
+    with pytest.raises(StudyError) as problem:
+        Workbench.open(edit(study, {"assignment.site_weights": {"Bax": 3.0}}))
+    assert problem.value.what == (
+        'study.toml: assignment.site_weights names "Bax", which is no site with a cutoff and rows.'
+    )
+    assert problem.value.do == 'Did you mean "Bex"?'
