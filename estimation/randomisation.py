@@ -7,10 +7,17 @@ is as extreme as the real one exactly when |A − cτ| ≥ |D − τ|, that is f
 (D + A)/(1 + c). The p-value at τ is the share of these intervals that hold τ, all of them hold D, and the ends of
 the confidence interval are order statistics of their ends: the inversion is exact and needs no grid.
 
+With partial take-up t the effect r is one on those who take it: y − r·t is what the lot cannot have moved
+(Imbens & Rosenbaum 2005), the same with A − r·D*(t) and D − r·D(t) in place of A − cτ and D − τ. Assignments that
+would have moved take-up as far as the real one, |D*(t)| ≥ |D(t)|, are counted as holding every r, which errs on the
+wide side.
+
 References
 ----------
 Cattaneo, M., Frandsen, B. & Titiunik, R. (2015). Randomization inference in the regression discontinuity design.
     Journal of Causal Inference 3, 1–24. https://doi.org/10.1515/jci-2013-0010
+Imbens, G. & Rosenbaum, P. (2005). Robust, accurate confidence intervals with a weak instrument: quarter of birth and
+    education. JRSS A 168, 109–126. https://doi.org/10.1111/j.1467-985X.2004.00339.x
 Hodges, J. & Lehmann, E. (1963). Estimates of location based on rank tests. Annals of Mathematical Statistics
     34, 598–611. https://doi.org/10.1214/aoms/1177704172
 """
@@ -49,7 +56,10 @@ class Randomisation:
     below, above
         Rows with an outcome inside it.
     estimate
-        Difference in means, treated less other, after slopes where they were removed.
+        Difference in means, treated less other, after slopes where they were removed; with take-up that difference over
+        the one in take-up.
+    intention
+        The difference in means of the outcome itself.
     hodges_lehmann
         Median of all differences between a treated and another row.
     p_value, low, high
@@ -68,6 +78,7 @@ class Randomisation:
     below: int
     above: int
     estimate: float
+    intention: float
     hodges_lehmann: float
     p_value: float
     low: float
@@ -91,6 +102,7 @@ def randomise(
     draws: int = FEWEST_DRAWS,
     seed: int = 0,
     slope: bool = False,
+    take_up: Vector | None = None,
 ) -> Randomisation:
     """Test and interval inside a window.
 
@@ -99,7 +111,9 @@ def randomise(
     position, outcome, above
         Shape (n,); rows outside the window are left alone. Outcomes must be known.
     slope
-        Take each side's least-squares slope in the score off its outcomes first.
+        Take each side's least-squares slope in the score off its outcomes (and take-up) first.
+    take_up
+        Shape (n,), known; None where everyone did what the rule says.
 
     Raises
     ------
@@ -121,17 +135,22 @@ def randomise(
     if slope:
         y = _without_slopes(x, y, upper)
     took = upper if treated == "above" else ~upper
+    dose = took.astype(np.float64)
+    if take_up is not None:
+        dose = _without_slopes(x, take_up[inside], upper) if slope else take_up[inside]
     found = None
     if not by_normal_law(len(y), int(took.sum())):
-        columns = np.column_stack((y - y.mean(), took - took.mean()))
+        columns = np.column_stack((y - y.mean(), dose - dose.mean()))
         found = assignments(columns, int(took.sum()), draws=draws, seed=seed)
     p_value, method = permutation_p(y, took, draws=draws, seed=seed, found=found)
-    ends = _normal_interval(y, took, level) if found is None else _interval(y, took, found, level)
+    ends = _normal_interval(y, dose, took, level) if found is None else _interval(y, dose, took, found, level)
+    intention, moved = _gap(y, took), _gap(dose, took)
     return Randomisation(
         window=(low, high),
         below=below_rows,
         above=above_rows,
-        estimate=float(y[took].mean() - y[~took].mean()),
+        estimate=intention / moved if moved != 0.0 else float("nan"),
+        intention=intention,
         hodges_lehmann=hodges_lehmann(y[took], y[~took]),
         p_value=p_value,
         low=ends[0],
@@ -157,16 +176,22 @@ def _without_slopes(x: Vector, y: Vector, upper: Mask) -> Vector:
     return result
 
 
-def _interval(y: Vector, took: Mask, found: Assignments, level: float) -> tuple[float, float]:
+def _gap(values: Vector, took: Mask) -> float:
+    return float(values[took].mean() - values[~took].mean())
+
+
+def _interval(y: Vector, dose: Vector, took: Mask, found: Assignments, level: float) -> tuple[float, float]:
     """The effects that the test at `level` does not reject; ends are infinite where too few assignments exist."""
     rows, count = len(y), int(took.sum())
-    observed = float(y[took].mean() - y[~took].mean())
+    observed, moved = _gap(y, took), _gap(dose, took)
+    if moved < 0.0:  # a mirror image: both differences change sign, the ratio does not
+        observed, moved = -observed, -moved
     a = difference_in_means(found.sums[:, 0], 0.0, count, rows)
     c = difference_in_means(found.sums[:, 1], 0.0, count, rows)
     ends = []
-    for top, bottom in ((observed - a, 1.0 - c), (observed + a, 1.0 + c)):
-        # The real assignment (c = 1) and its mirror (c = −1) are as extreme as themselves at every τ.
-        ends.append(np.divide(top, bottom, out=np.full(len(a), np.nan), where=bottom > 1e-12))
+    for top, bottom in ((observed - a, moved - c), (observed + a, moved + c)):
+        # The real assignment and its mirror are as extreme as themselves at every effect.
+        ends.append(np.divide(top, bottom, out=np.full(len(a), np.nan), where=bottom > 1e-12 * moved))
     always = np.isnan(ends[0]) | np.isnan(ends[1])
     lower = np.where(always, -np.inf, np.fmin(ends[0], ends[1]))
     upper = np.where(always, np.inf, np.fmax(ends[0], ends[1]))
@@ -178,17 +203,19 @@ def _interval(y: Vector, took: Mask, found: Assignments, level: float) -> tuple[
     return float(np.sort(lower)[needed - 1]), float(np.sort(-upper)[needed - 1] * -1.0)
 
 
-def _normal_interval(y: Vector, took: Mask, level: float) -> tuple[float, float]:
-    """Roots in τ of (D − τ)² = z²·Var(D*) with Var(D*) = N/(m n)·s²(y − τT), a quadratic."""
+def _normal_interval(y: Vector, dose: Vector, took: Mask, level: float) -> tuple[float, float]:
+    """Roots in r of (D − r·D(t))² = z²·Var(D*) with Var(D*) = N/(m n)·s²(y − r·t), a quadratic."""
     rows, count = len(y), int(took.sum())
-    observed = float(y[took].mean() - y[~took].mean())
+    observed, moved = _gap(y, took), _gap(dose, took)
     scale = quantile(level) ** 2 * rows / (count * (rows - count))
-    spread = np.cov(y, took.astype(np.float64))
+    spread = np.cov(y, dose)
     a, b, c = (
-        1.0 - scale * spread[1, 1],
-        observed - scale * spread[0, 1],
+        moved**2 - scale * spread[1, 1],
+        observed * moved - scale * spread[0, 1],
         observed**2 - scale * spread[0, 0],
     )
+    if a <= 0.0:  # take-up does not move enough to bound the ratio
+        return -np.inf, np.inf
     reach = np.sqrt(max(b * b - a * c, 0.0))
     return float((b - reach) / a), float((b + reach) / a)
 

@@ -29,8 +29,7 @@ def _intervals(effect: Effect) -> dict[str, tuple[float, float]]:
     found = {"robust": (reading.robust.low, reading.robust.high)}
     if reading.bias_aware is not None:
         found["bias-aware"] = (reading.bias_aware.low, reading.bias_aware.high)
-    # With take-up the randomisation answer is about the outcome itself: another quantity.
-    if effect.randomisation is not None and not effect.fuzzy:
+    if effect.randomisation is not None:
         found["randomisation"] = (effect.randomisation.low, effect.randomisation.high)
     return found
 

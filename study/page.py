@@ -36,8 +36,8 @@ def result_lines(
     lines += _wrapped(rule_sentence(study), width)
     lines += _wrapped(_rows_sentence(result), width)
     if result.assigned.border is not None:
-        for note in result.assigned.border.notes:
-            lines += _item(note, width)
+        for found in result.assigned.border.notes:
+            lines += _item(found, width)
     compared = {one.outcome: one for one in result.comparisons}
     told: set[str] = set()
     for effect in result.effects:

@@ -32,6 +32,7 @@ def randomisation_document(found: Randomisation) -> dict[str, Any]:
         "below": found.below,
         "above": found.above,
         "estimate": number(found.estimate),
+        "intention": number(found.intention),
         "hodges_lehmann": number(found.hodges_lehmann),
         "p_value": number(found.p_value),
         "low": number(found.low),

@@ -120,3 +120,42 @@ def test_a_side_without_two_rows_is_refused_in_words() -> None:
         "Within the window -1 to 1 there are 2 rows with an outcome below the line and 1 above; "
         "local randomisation needs two on each side."
     )
+
+
+@pytest.mark.parametrize("seed", range(3))
+def test_with_take_up_the_interval_is_the_inversion_of_the_test_of_what_the_lot_left_alone(seed: int) -> None:
+    rng = np.random.default_rng(seed + 40)
+    x = np.concatenate((-rng.uniform(0.1, 1.0, 6), rng.uniform(0.0, 1.0, 6)))
+    took = x >= 0
+    dose = np.where(took, rng.uniform(size=12) < 0.9, rng.uniform(size=12) < 0.1).astype(float)
+    y = rng.normal(size=12) + 2.0 * dose
+    found = randomise(
+        position=x, outcome=y, above=took, treated="above", window=(-1, 1), take_up=dose, level=0.9
+    )
+    assert found.estimate == pytest.approx(found.intention / (dose[took].mean() - dose[~took].mean()))
+
+    def p(ratio: float) -> float:
+        return p_by_hand(y - ratio * dose, took, 0.0)
+
+    if np.isfinite(found.low):
+        assert p(found.low - 1e-6) <= 0.1
+    if np.isfinite(found.high):
+        assert p(found.high + 1e-6) <= 0.1
+    assert p(found.estimate) > 0.1
+    # Nothing that the test keeps may lie outside.
+    for ratio in np.linspace(found.estimate - 20, found.estimate + 20, 401):
+        if p(float(ratio)) > 0.1:
+            assert found.low - 1e-9 <= ratio <= found.high + 1e-9
+
+
+def test_many_rows_with_take_up_agree_with_the_drawn_interval() -> None:
+    rng = np.random.default_rng(3)
+    x = rng.uniform(-1, 1, 1900)
+    dose = (rng.uniform(size=1900) < 0.2 + 0.6 * (x >= 0)).astype(float)
+    y = rng.normal(size=1900) + 0.5 * dose
+    given = {"above": x >= 0, "treated": "above", "window": (-1.0, 1.0)}
+    drawn = randomise(position=x, outcome=y, take_up=dose, **given)  # type: ignore[arg-type]
+    doubled = {name: np.tile(v, 2) for name, v in {"position": x, "outcome": y, "take_up": dose}.items()}
+    normal = randomise(**doubled, above=np.tile(x >= 0, 2), treated="above", window=(-1.0, 1.0))  # type: ignore[arg-type]
+    assert normal.estimate == pytest.approx(drawn.estimate, rel=1e-12)
+    assert (drawn.high - drawn.low) / (normal.high - normal.low) == pytest.approx(np.sqrt(2.0), rel=0.04)

@@ -164,6 +164,7 @@ def with_randomisation(effect: Effect, low: float, high: float, window: float = 
         below=30,
         above=30,
         estimate=0.5 * (low + high),
+        intention=0.5 * (low + high),
         hodges_lehmann=0.5 * (low + high),
         p_value=0.5,
         low=low,
