@@ -39,7 +39,8 @@ def outline(vertices: int) -> np.ndarray:
     rng = np.random.default_rng(60)
     turn = np.linspace(0.0, 2.0 * np.pi, vertices, endpoint=False)
     waves = (rng.normal() * 0.3 / k * np.cos(k * turn + rng.uniform(0.0, 2.0 * np.pi)) for k in range(1, 40))
-    radius = np.clip(1.0 + sum(waves) + rng.normal(scale=2e-3, size=vertices), 0.2, None)
+    rough = rng.normal(scale=np.pi / vertices, size=vertices)  # half the spacing: as jagged at every size
+    radius = np.clip(1.0 + sum(waves), 0.2, None) * (1.0 + rough)
     return 1e5 * np.column_stack((radius * np.cos(turn), radius * np.sin(turn)))
 
 
