@@ -24,6 +24,49 @@ def disagreement(effect: Effect) -> tuple[str, ...]:
     return tuple(sentences)
 
 
+def remarks(effect: Effect) -> tuple[str, ...]:
+    """What stands beside the three answers: why they differ, the answer with covariates, the bound on the curvature."""
+    return (*disagreement(effect), *_covariates(effect), *_curvature(effect))
+
+
+def _covariates(effect: Effect) -> list[str]:
+    """The robust answer with (or without) covariates, whichever does not lead."""
+    other = effect.unadjusted if effect.choices.adjust else effect.adjusted
+    if other is None or effect.unadjusted is None:
+        return (
+            [] if effect.adjusted_reason is None else [f"No answer with covariates: {effect.adjusted_reason}"]
+        )
+    scale = 100.0 if effect.binary else 1.0
+    estimate, low, high = (
+        figure(scale * value, scale * other.robust.std_error, sign=value is other.robust.estimate)
+        for value in (other.robust.estimate, other.robust.low, other.robust.high)
+    )
+    how = "Without" if effect.choices.adjust else "With"
+    return [f"{how} covariates taken off the robust answer is {estimate}, {low} to {high}."]
+
+
+def _curvature(effect: Effect) -> list[str]:
+    """How the bias-aware interval of the jump in the outcome moves with its bound, and where it gives way."""
+    if len(effect.curvature_table) != 3 or effect.breakdown is None:
+        return []
+    scale = 100.0 if effect.binary else 1.0
+    error = scale * (effect.reading.intention or effect.reading).std_error
+    half, _, double = (
+        f"{figure(scale * row.honest.low, error)} to {figure(scale * row.honest.high, error)}"
+        for row in effect.curvature_table
+    )
+    bound = effect.curvature_table[1].honest.curvature
+    what = "of the outcome itself " if effect.fuzzy else ""
+    gives_way = (
+        "it holds zero under any bound"
+        if effect.breakdown == 0.0
+        else f"it first holds zero under a bound of {effect.breakdown:.3g}"
+    )
+    return [
+        f"Under half the bound of {bound:.3g} the bias-aware interval {what}is {half}, under twice it {double}; {gives_way}."
+    ]
+
+
 def _intervals(effect: Effect) -> dict[str, tuple[float, float]]:
     reading = effect.reading
     found = {"robust": (reading.robust.low, reading.robust.high)}

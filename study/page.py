@@ -10,7 +10,7 @@ from estimation.effect import Effect
 from study.analysis import Workbench
 from study.comparison import Comparison
 from study.comparison_words import opening, sentences, site_texts
-from study.disagreement import disagreement
+from study.disagreement import remarks
 from study.figures import effect_picture, in_percent, table_lines
 from study.literal import clean
 from study.result import Result
@@ -55,7 +55,7 @@ def result_lines(
             lines.append("")
             lines += _picture(effect, bench, width, plain)
         lines.append("")
-        for sentence in (*disagreement(effect), *_take_up(effect)):
+        for sentence in (*remarks(effect), *_take_up(effect)):
             lines += _item(sentence, width)
         for note in effect.notes:
             lines += _item(f"{'Caution: ' if note.severity == 'caution' else ''}{note.sentence}", width)

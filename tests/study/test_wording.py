@@ -10,7 +10,7 @@ import pytest
 from estimation.effect import Effect
 from estimation.randomisation import Randomisation
 from study.analysis import Workbench
-from study.disagreement import disagreement
+from study.disagreement import disagreement, remarks
 from study.document import edit, load_study
 from study.page import result_lines
 from study.wording import answers_table, effect_sentence, figure, p_text, pieces_text, rule_sentence
@@ -206,3 +206,13 @@ def test_the_slope_inside_the_window_is_named_when_it_moves_the_answer(tmp_path:
     assert figure(2.0 * error, error, sign=True) in told[0]
     flat = replace(with_randomisation(effect, 1.0, 4.0), slopes=(0.0, 0.0))
     assert not any("slopes of the local fits" in sentence for sentence in disagreement(flat))
+
+
+def test_the_bound_on_the_curvature_is_told_at_half_and_twice_and_where_it_gives_way(tmp_path: Path) -> None:
+    effect = bench(tmp_path).effect("visits")
+    said = remarks(effect)[-1]
+    spread = effect.reading.std_error
+    low, high = effect.curvature_table[2].honest.low, effect.curvature_table[2].honest.high
+    assert f"under twice it {figure(low, spread)} to {figure(high, spread)}" in said
+    assert effect.breakdown is not None
+    assert f"a bound of {effect.breakdown:.3g}" in said or "under any bound" in said
