@@ -144,7 +144,7 @@ def choices_lines(study: Study, width: int) -> list[Line]:
 
 def all_text(standing: Standing, study: Study) -> list[str]:
     """Everything that the screen says, a sentence or an answer a line, for others to wrap."""
-    from study.disagreement import disagreement
+    from study.disagreement import remarks
     from study.wording import answers_table, effect_sentence
 
     effect = standing.effect
@@ -159,7 +159,7 @@ def all_text(standing: Standing, study: Study) -> list[str]:
             lines.append(
                 f"{row.name.ljust(names)}  {row.estimate} ({row.low} to {row.high}): {lead}{row.basis}"
             )
-    lines += ["", *disagreement(effect)]
+    lines += ["", *remarks(effect)]
     for note in effect.notes:
         lines.append(
             f"{'Caution: ' if note.severity == 'caution' else ''}{note.sentence} {note.remedy}".strip()
