@@ -177,11 +177,14 @@ class Boundary:
     def _source(self, stretch: Stretch) -> Stretch:
         """Where a stretch of this boundary lies on the one that it was cut from."""
         origin = self.sources[stretch.part]
-        if origin.start_m == 0.0:
+        if self.closed[stretch.part]:
             return replace(stretch, part=origin.part)
-        return Stretch(
-            part=origin.part, start_m=origin.start_m + stretch.start_m, end_m=origin.start_m + stretch.end_m
-        )
+        around = np.inf  # the whole ring's length, where this part runs over its start
+        if origin.end_m < origin.start_m:
+            around = float(self.length_m[stretch.part]) + origin.start_m - origin.end_m
+        ends = (origin.start_m + position for position in (stretch.start_m, stretch.end_m))
+        start, end = (position - around if position > around else position for position in ends)
+        return Stretch(part=origin.part, start_m=start, end_m=end)
 
     def _check(self, stretches: Sequence[Stretch]) -> None:
         if not stretches:

@@ -118,7 +118,7 @@ def read_crs(text: str | CRS) -> CRS:
 def missing_crs(x: Vector, y: Vector, what: str) -> GeometryError:
     """The refusal to guess what coordinates without a coordinate system mean."""
     return GeometryError(
-        f"{what}: nothing says which coordinate system its coordinates are in; "
+        f"{what}: nothing says which coordinate system the coordinates are in; "
         f"they lie between {span(x)} across and {span(y)} up.",
         'Name it: "EPSG:4326" for longitude and latitude in degrees, the code of a projected one, '
         'or "plain" for lengths in a plane.',

@@ -32,7 +32,7 @@ def test_the_file_says_what_its_coordinates_are(tmp_path) -> None:
     [
         ("EPSG:4326", "EPSG:4269", "zone.shp: its coordinates are in WGS 84 by the file, but in NAD83 by the study."),
         ("EPSG:4326", "plain", "zone.shp: its coordinates are in WGS 84, where degrees are not lengths, so they can't be read as plain units."),
-        (None, None, "zone.shp: nothing says which coordinate system its coordinates are in; they lie between -81 and -80 across and 32 and 33 up."),
+        (None, None, "zone.shp: nothing says which coordinate system the coordinates are in; they lie between -81 and -80 across and 32 and 33 up."),
         ("EPSG:4326", "EPSG:1", "'EPSG:1' is not a coordinate system that is known here."),
     ],
 )  # fmt: skip

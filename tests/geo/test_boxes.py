@@ -27,8 +27,9 @@ def test_no_place_of_a_box_is_farther_from_its_middle_than_said(crs, latitude, r
     rng = np.random.default_rng(70)
     x, y = rng.uniform(-3, 6, 20_000), rng.uniform(latitude - 4, latitude + 4, 20_000)
     grid = boxes(x, y, reach, boundary)
-    if grid is None:
-        pytest.skip("more boxes than places")
+    if grid is None:  # only where more boxes than places would be needed
+        assert reach < 0.5 if crs == "plain" else reach < 5e4
+        return
     middle = np.zeros((grid.count, 2))
     middle[grid.occupied] = np.column_stack((grid.across, grid.up))
     middle = middle[grid.number]

@@ -127,7 +127,7 @@ def test_an_outline_outside_its_systems_region_is_noted() -> None:
 REFUSED = {
     "no crs": (
         shapes(shapely.box(-81, 30, -80, 31)), None,
-        "The area: nothing says which coordinate system its coordinates are in; "
+        "The area: nothing says which coordinate system the coordinates are in; "
         "they lie between -81 and -80 across and 30 and 31 up.",
     ),
     "unknown crs": (
@@ -269,6 +269,8 @@ def test_keeping_stretches_leaves_open_parts_and_the_same_inside() -> None:
     assert located.loose_end.tolist() == [True, False, True]
     again = kept.keep([Stretch(part=0, start_m=1.0, end_m=2.0)])
     assert again.sources == (Stretch(part=0, start_m=14.0, end_m=15.0),)
+    (over,) = kept.keep([Stretch(part=0, start_m=2.0, end_m=5.0)]).sources
+    assert (over.start_m, over.end_m) == pytest.approx((15.0, 2.0))  # over the ring's start
     whole = boundary.keep(boundary.whole())
     assert whole.closed.tolist() == [True]
 

@@ -26,7 +26,7 @@ X, Y = RNG.uniform(-81.5, -79.5, 500), RNG.uniform(31.5, 33.5, 500)
     ("x", "y", "crs", "boundary", "sentence"),
     [
         (Y, X, "EPSG:4326", EARTH, "The units: longitude and latitude seem to be swapped: 0% of them lie near the boundary as given, SHARE the other way round."),
-        (X, Y, None, EARTH, f"The units: nothing says which coordinate system its coordinates are in; they lie between {X.min():.7g} and {X.max():.7g} across and {Y.min():.7g} and {Y.max():.7g} up."),
+        (X, Y, None, EARTH, f"The units: nothing says which coordinate system the coordinates are in; they lie between {X.min():.7g} and {X.max():.7g} across and {Y.min():.7g} and {Y.max():.7g} up."),
         (X, Y, "plain", EARTH, "The units are in plain units, the boundary is on the earth."),
         (X, Y, "EPSG:4326", PLAIN, "The units are on the earth, the boundary is in plain units."),
         (X + 90, Y, "EPSG:4326", EARTH, f"The units: none comes near the boundary; they lie between {X.min() + 90:.7g} and {X.max() + 90:.7g} across and {Y.min():.7g} and {Y.max():.7g} up, the boundary between -81 and -80 and 32 and 33."),
