@@ -9,12 +9,16 @@ from typing import TYPE_CHECKING, TypeVar
 import numpy as np
 
 from estimation.arrays import Codes, Vector
+from estimation.effect_slope import effect_slope
 from estimation.errors import CannotEstimate
+from estimation.inference import Interval
+from estimation.line import Line
 from estimation.line_fit import Bandwidths
 from estimation.line_shares import shares_at_line
 from estimation.randomisation import Randomisation
 from estimation.reading import Reading
 from estimation.shared_clusters import ClusterShares, shares_of_jump, shares_of_ratio
+from study.between import Between, neighbouring_pairs
 from study.sites_together import Together, put_together
 
 if TYPE_CHECKING:
@@ -42,6 +46,8 @@ class SiteRow:
     weight
         Its weight in the pooled effect: the share, for a fuzzy study times its jump in take-up, over all; None where
         it has no estimate of its own or the pooled effect none.
+    slope
+        How its effect changes as its cutoff moves, per unit of score; None where it was not asked or can't be had.
     dose
         By how much the programme grows at this step; None where the study names no doses.
     """
@@ -59,6 +65,7 @@ class SiteRow:
     share: float | None = None
     weight: float | None = None
     dose: float | None = None
+    slope: Interval | None = None
 
     @property
     def estimated(self) -> bool:
@@ -80,6 +87,8 @@ class Comparison:
         The same of the jump in the outcome itself; None for a sharp study.
     per_dose
         The same of the effects divided by how much the programme grows at each step; None without doses.
+    between
+        The effect between neighbouring cutoffs, for a few sites at their own widths.
     pooled, pooled_bandwidths
         The pooled effect over normalised scores; None where it can't be had, then `pooled_reason` says why.
     level
@@ -97,6 +106,7 @@ class Comparison:
     together: Together
     intention: Together | None
     per_dose: Together | None
+    between: tuple[Between, ...]
     pooled: Reading | None
     pooled_bandwidths: Bandwidths | None
     pooled_reason: str | None
@@ -168,6 +178,7 @@ def compare(
         together=put_together(bench, rows, shared, sharp=False),
         intention=put_together(bench, rows, [site.jump for site in sites], sharp=True) if fuzzy else None,
         per_dose=put_together(bench, rows, shared, sharp=False, by_dose=True) if doses else None,
+        between=neighbouring_pairs(bench, outcome) if width is None else (),
         pooled=pooled,
         pooled_bandwidths=widths,
         pooled_reason=reason,
@@ -208,7 +219,13 @@ def _site(bench: Workbench, outcome: str, name: str, width: float | None) -> _Si
         return _Site(_bare(bench, outcome, name, problem.sentence, problem.remedy), None, None)
     below, above = bench.rows_with(outcome, name)
     row = SiteRow(
-        name=name, cutoff=bench.cutoff(name), below=below, above=above, bandwidths=widths, reading=reading
+        name=name,
+        cutoff=bench.cutoff(name),
+        below=below,
+        above=above,
+        bandwidths=widths,
+        reading=reading,
+        slope=_slope(line, widths) if width is None else None,
     )
     adjust = line.choices.adjust and line.with_covariates is not None
     changes = line.cluster_changes(widths, adjust=adjust)
@@ -216,6 +233,13 @@ def _site(bench: Workbench, outcome: str, name: str, width: float | None) -> _Si
         return _Site(row, None, None)
     ratio = shares_of_ratio(changes, line.fit(widths, adjust=adjust)) if line.fuzzy else None
     return _Site(row, ratio, shares_of_jump(changes))
+
+
+def _slope(line: Line, widths: Bandwidths) -> Interval | None:
+    try:
+        return effect_slope(line, widths)
+    except CannotEstimate:
+        return None
 
 
 def _pooled(

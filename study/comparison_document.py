@@ -7,6 +7,7 @@ from typing import Any
 
 from estimation.inference import Interval
 from estimation.pooling import Mean
+from study.between import between_document
 from study.comparison import Comparison, SiteRow
 from study.result_parts import interval_document, number, randomisation_document
 from study.sites_together import Together
@@ -32,6 +33,7 @@ def comparison_document(comparison: Comparison) -> dict[str, Any]:
         "weights": {row.name: number(row.share) for row in comparison.rows},
         **_together(together),
         "sites": [_site(comparison, row) for row in comparison.rows],
+        "between": [between_document(pair) for pair in comparison.between],
         "not_estimated": [
             {"site": row.name, "reason": row.reason, "remedy": row.remedy} for row in comparison.not_estimated
         ],
@@ -174,6 +176,8 @@ def _site(comparison: Comparison, row: SiteRow) -> dict[str, Any]:
     document["robust"] = interval_document(row.reading.robust)
     if row.bandwidths is not None:
         document["bandwidth"] = {"below": number(row.bandwidths.below), "above": number(row.bandwidths.above)}
+    if row.slope is not None:
+        document["slope_of_the_effect"] = interval_document(row.slope)
     i = together.place(row.name)
     if i is None:
         return document

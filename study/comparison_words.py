@@ -8,6 +8,7 @@ import numpy as np
 
 from estimation.effect import FEW_CLUSTERS
 from estimation.inference import Interval
+from study.between import between_sentence
 from study.comparison import Comparison, SiteRow, order_of
 from study.document import Study
 from study.literal import clean
@@ -132,6 +133,10 @@ def sentences(comparison: Comparison) -> tuple[str, ...]:
     if comparison.intention is not None:
         said += _intention(comparison)
     said += _per_dose(comparison)
+    said += [
+        between_sentence(pair, scale=scale_of(comparison), level=comparison.level)
+        for pair in comparison.between
+    ]
     said += _joint(comparison)
     said += [_unestimated(comparison, row) for row in comparison.not_estimated]
     said += _weak(comparison)

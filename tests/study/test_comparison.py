@@ -7,8 +7,10 @@ import numpy as np
 import pytest
 from statsmodels.stats.meta_analysis import combine_effects
 
+from estimation.extrapolation import Group, extrapolate
 from estimation.kernels import kernel_values
 from study.analysis import Workbench
+from study.between import between
 from study.comparison import compare, order_of
 from study.comparison_words import sentences, site_texts
 from study.document import Study, edit, load_study
@@ -266,3 +268,37 @@ def test_a_mean_by_the_studys_own_weights(tmp_path: Path) -> None:
         'study.toml: assignment.site_weights names "Bax", which is no site with a cutoff and rows.'
     )
     assert problem.value.do == 'Did you mean "Bex"?'
+
+
+@pytest.mark.parametrize("fuzzy", [False, True])
+def test_between_cutoffs_the_bench_asks_what_the_file_says(tmp_path: Path, fuzzy: bool) -> None:
+    bench = Workbench.open(load_study(write(tmp_path, fuzzy=fuzzy)))
+    pair = between(bench, "rides", "Dun", "Bex")
+    assert (pair.whose, pair.other) == ("Bex", "Dun")
+    assert pair.found is not None
+    rows = [line.split(",") for line in (tmp_path / "rides.csv").read_text().splitlines()[1:]]
+    groups = []
+    for town in ("Bex", "Dun"):
+        x, y, t = (np.array([float(row[j]) for row in rows if row[0] == town]) for j in (1, 2, 3))
+        widths = bench.chosen("rides", town)
+        groups.append(
+            Group(
+                score=x,
+                values=np.column_stack((y, t)) if fuzzy else y[:, None],
+                treated=x >= CUTOFFS[town],
+                cutoff=CUTOFFS[town],
+                bandwidth=widths.below,
+            )
+        )
+    direct = extrapolate(
+        *groups, points=pair.found.points, kernel="triangular", order=1, level=0.95, treated_above=True
+    )
+    assert pair.found.points[4] == 50.0
+    assert pair.found.estimate == pytest.approx(direct.estimate, rel=1e-8)
+    middle, expected = pair.found.robust[4], direct.robust[4]
+    assert middle is not None and expected is not None
+    assert middle.low == pytest.approx(expected.low, rel=1e-7)
+    listed = compare(bench, "rides").between
+    assert ("Bex", "Dun") not in {(one.whose, one.other) for one in listed}  # others lie between
+    hamlet = next(one for one in listed if "Hamlet" in (one.whose, one.other))
+    assert hamlet.found is None and hamlet.reason is not None
