@@ -21,11 +21,14 @@ class OneSide:
     y: np.ndarray
     weight: np.ndarray | None
     square: np.ndarray  # σ̂²
+    ticks: np.ndarray
 
 
-def side_of(x, y, weight, side):
+def side_of(x, y, weight, side, ticks):
     part = None if weight is None else weight[side]
-    return OneSide(x[side], y[side].astype(Long), part, neighbour_residuals(x[side], y[side]) ** 2)
+    return OneSide(
+        x[side], y[side].astype(Long), part, neighbour_residuals(ticks[side], y[side]) ** 2, ticks[side]
+    )
 
 
 def rough(x, kernel):
@@ -35,11 +38,12 @@ def rough(x, kernel):
     return RULE_OF_THUMB[kernel] * spread * len(x) ** -0.2
 
 
-def least(side, order):
-    """The distance that holds p + 2 distinct scores and 10 rows."""
-    distance = np.sort(np.abs(side.x))
-    distinct = np.unique(distance)
-    return max(distinct[min(order + 1, len(distinct) - 1)], distance[min(9, len(distance) - 1)])
+def least(side, order, kernel):
+    """The distance that holds p + 2 distinct scores and 10 rows; a kernel that ends at zero holds no score on its edge."""
+    distance = np.abs(side.x)[np.argsort(np.abs(side.ticks))]
+    distinct = distance[np.unique(np.sort(np.abs(side.ticks)), return_index=True)[1]]
+    wanted = order + 1 if kernel == "uniform" else order + 2
+    return max(distinct[min(wanted, len(distinct) - 1)], distance[min(9, len(distance) - 1)])
 
 
 def terms(side, width, order, power, kernel, derivative, source):
@@ -65,16 +69,15 @@ def optimum(variance, bias, bias_variance, width, ahead, power, derivative):
     return float(width * ratio ** (Long(1) / exponent))
 
 
-def mse(x, y, above, order, kernel="triangular", weight=None, per_side=False, bounded=True):
-    """(h below, h above, b below, b above)."""
-    below_side, above_side = side_of(x, y, weight, ~above), side_of(x, y, weight, above)
+def mse(x, y, above, order, kernel="triangular", weight=None, per_side=False, ticks=None):
+    """(h below, h above, b below, b above). Exact `ticks` of the score, where given, decide what is tied."""
+    ticks = x if ticks is None else ticks
+    below_side, above_side = (side_of(x, y, weight, side, ticks) for side in (~above, above))
     both = (below_side, above_side)
     p, q = order, order + 1
     farthest = max(np.max(np.abs(s.x)) for s in both)
-    floor = max(least(s, q) for s in both)
-    c = rough(x, kernel)
-    if bounded:
-        c = min(max(c, floor), farthest)
+    floor = max(least(s, q, kernel) for s in both)
+    c = min(max(rough(x, kernel), floor), farthest)
 
     def combine(parts):
         """Both sides: variances add, biases are subtracted (the effect is a difference)."""
@@ -84,10 +87,8 @@ def mse(x, y, above, order, kernel="triangular", weight=None, per_side=False, bo
         return [(v0 + v1, b1 - b0, r0 + r1)] * 2
 
     def clip(widths):
-        if not bounded:
-            return widths
         if per_side:
-            return [min(max(w, least(s, q)), np.max(np.abs(s.x))) for w, s in zip(widths, both)]
+            return [min(max(w, least(s, q, kernel)), np.max(np.abs(s.x))) for w, s in zip(widths, both)]
         return [min(max(w, floor), farthest) for w in widths]
 
     # 1. The coefficient of x^(q+1) from a global polynomial of order q + 1.
