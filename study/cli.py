@@ -18,6 +18,7 @@ Cutbank: what did a programme change that was handed out by a line?
   cutbank demo [NAME]                       open an invented study: hulls, valleys or wells
   cutbank run STUDY [--out FOLDER] [--json] estimate a study and print the result
   cutbank verify STUDY                      read and check a study, estimate nothing
+  cutbank seal STUDY [--by NAME]            freeze the plan, so that masked outcomes may be seen
   cutbank columns FILE [--table NAME]       list a data file's columns, kinds, gaps and ranges
   cutbank assign STUDY --to FILE            write each row's side and position (.csv or .parquet)
 
@@ -34,6 +35,7 @@ USAGE: Final = {
     "demo": "cutbank demo [NAME] [--mouse] [--ascii]",
     "run": "cutbank run STUDY [--out FOLDER] [--json] [--ascii]",
     "verify": "cutbank verify STUDY",
+    "seal": "cutbank seal STUDY [--by NAME]",
     "columns": "cutbank columns FILE [--table NAME]",
     "assign": "cutbank assign STUDY --to FILE",
 }
@@ -86,7 +88,9 @@ def _dispatch(arguments: list[str]) -> int:
         print(HELP, end="")
         return 0
     if arguments == ["--version"]:
-        print(f"cutbank {_version()}")
+        from study.version import program_version
+
+        print(f"cutbank {program_version()}")
         return 0
     place = next((i for i, word in enumerate(arguments) if not word.startswith("-")), None)
     command = arguments[place] if place is not None else "bench"
@@ -124,6 +128,11 @@ def _declare_run(parser: ArgumentParser) -> None:
 
 def _declare_verify(parser: ArgumentParser) -> None:
     parser.add_argument("study", metavar="STUDY")
+
+
+def _declare_seal(parser: ArgumentParser) -> None:
+    parser.add_argument("study", metavar="STUDY")
+    parser.add_argument("--by", metavar="NAME")
 
 
 def _declare_columns(parser: ArgumentParser) -> None:
@@ -175,6 +184,14 @@ def _verify(asked: Namespace) -> int:
     return verify_study(Path(asked.study))
 
 
+def _seal(asked: Namespace) -> int:
+    from pathlib import Path
+
+    from study.commands.seal import seal_study
+
+    return seal_study(Path(asked.study), by=asked.by)
+
+
 def _columns(asked: Namespace) -> int:
     from pathlib import Path
 
@@ -196,18 +213,10 @@ _COMMANDS: Final[dict[str, tuple[Callable[[ArgumentParser], None], Callable[[Nam
     "demo": (_declare_demo, _demo),
     "run": (_declare_run, _run),
     "verify": (_declare_verify, _verify),
+    "seal": (_declare_seal, _seal),
     "columns": (_declare_columns, _columns),
     "assign": (_declare_assign, _assign),
 }
-
-
-def _version() -> str:
-    from importlib.metadata import PackageNotFoundError, version  # only asked for by name
-
-    try:
-        return version("cutbank")
-    except PackageNotFoundError:
-        return "(not installed)"
 
 
 def _own_fault(error: Exception) -> int:

@@ -23,6 +23,9 @@ from estimation.reading import Reading
 from estimation.sample import Sample, Side, build_sample
 from study.analysis import Workbench
 from study.literal import clean
+from study.record import record_of
+from study.result import document_head
+from study.result_parts import number
 
 POWER: Final = 0.8
 
@@ -82,23 +85,27 @@ class MaskedResult:
         return self.bench.assigned.cluster is not None
 
     def to_document(self) -> dict[str, Any]:
-        """The `before_the_seal` part of the result document."""
+        """The result document of a study whose outcomes are masked: no effects, and `before_the_seal` in their place."""
+        bench = self.bench
+        reason = how_to_seal(bench)
         return {
-            "power": POWER,
-            "level": self.bench.study.estimate.level,
-            "designs": [_design_document(design) for design in self.designs],
-            "take_up": [
-                {
-                    "where": where,
-                    "bandwidth": {"below": widths.below, "above": widths.above},
-                    "jump": reading.estimate,
-                    "std_error": _finite(reading.std_error),
-                    "low": _finite(reading.robust.low),
-                    "high": _finite(reading.robust.high),
-                    "levels": {"below": reading.levels_below, "above": reading.levels_above},
-                }
-                for where, widths, reading in self.take_up
+            **document_head(bench.study, bench.assigned, record_of(bench.study, bench.assigned.fingerprint)),
+            "effects": [],
+            "effects_reason": reason,
+            "not_estimated": [
+                {"outcome": one.outcome, "where": one.where, "reason": one.sentence, "remedy": one.remedy}
+                for one in self.withheld
             ],
+            "before_the_seal": {
+                "power": POWER,
+                "level": bench.study.estimate.level,
+                "designs": [_design_document(design) for design in self.designs],
+                "take_up": [_take_up_document(*found) for found in self.take_up],
+            },
+            "comparison": None,
+            "comparison_reason": reason,
+            "doubts": [],
+            "doubts_reason": reason,
         }
 
 
@@ -198,12 +205,20 @@ def _design_document(design: Design) -> dict[str, Any]:
             "rule": widths.rule,
         },
         "counts": {"below": design.below, "above": design.above},
-        "detectable_in_sd": _finite(design.detectable),
+        "detectable_in_sd": number(design.detectable),
     }
 
 
-def _finite(value: float) -> float | None:
-    return float(value) if np.isfinite(value) else None
+def _take_up_document(where: str, widths: Bandwidths, reading: Reading) -> dict[str, Any]:
+    return {
+        "where": where,
+        "bandwidth": {"below": widths.below, "above": widths.above},
+        "jump": reading.estimate,
+        "std_error": number(reading.std_error),
+        "low": number(reading.plain.low),
+        "high": number(reading.plain.high),
+        "levels": {"below": reading.levels_below, "above": reading.levels_above},
+    }
 
 
 def how_to_seal(bench: Workbench) -> str:

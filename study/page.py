@@ -8,6 +8,7 @@ import numpy as np
 
 from estimation.effect import Effect
 from study.analysis import Workbench
+from study.assemble import Assigned
 from study.comparison import Comparison
 from study.comparison_words import opening, sentences, site_texts
 from study.disagreement import remarks
@@ -33,11 +34,11 @@ def result_lines(
     """
     study = result.study
     lines = [clean(study.title) or clean(study.path.name), ""]
-    lines += _wrapped(rule_sentence(study), width)
-    lines += _wrapped(_rows_sentence(result), width)
+    lines += wrapped_lines(rule_sentence(study), width)
+    lines += wrapped_lines(rows_sentence(result.assigned), width)
     if result.assigned.border is not None:
         for found in result.assigned.border.notes:
-            lines += _item(found, width)
+            lines += item_lines(found, width)
     compared = {one.outcome: one for one in result.comparisons}
     told: set[str] = set()
     for effect in result.effects:
@@ -48,7 +49,7 @@ def result_lines(
             if effect.kind in ("site", "step", "segment"):
                 continue  # one line of the table each; the document holds them in full
         lines.append("")
-        lines += _wrapped(effect_sentence(effect, study), width)
+        lines += wrapped_lines(effect_sentence(effect, study), width)
         lines.append("")
         lines += _answers(effect, width)
         if bench is not None and effect.kind not in ("site", "segment", "step"):
@@ -56,22 +57,29 @@ def result_lines(
             lines += _picture(effect, bench, width, plain)
         lines.append("")
         for sentence in (*remarks(effect), *_take_up(effect)):
-            lines += _item(sentence, width)
+            lines += item_lines(sentence, width)
+        departs = () if result.record is None else result.record.departs(effect.outcome)
+        if departs:
+            lines += item_lines(f"Departs from the sealed plan in {', '.join(departs)}.", width)
         for note in effect.notes:
-            lines += _item(f"{'Caution: ' if note.severity == 'caution' else ''}{note.sentence}", width)
+            lines += item_lines(f"{'Caution: ' if note.severity == 'caution' else ''}{note.sentence}", width)
     for failure in result.failures:
         if failure.outcome in compared and compared[failure.outcome].has(failure.where):
             continue  # said beside its site
         lines.append("")
-        lines += _wrapped(
+        lines += wrapped_lines(
             f"{clean(failure.outcome)} ({clean(failure.where)}) could not be estimated: {failure.sentence} "
             f"{failure.remedy}",
             width,
         )
     if result.families:
         lines += ["", *_families(result, width)]
+    if result.record is not None:
+        lines.append("")
+        for sentence in result.record.sentences(study):
+            lines += item_lines(sentence, width)
     lines.append("")
-    lines += _wrapped(
+    lines += wrapped_lines(
         "The effect holds for units near the line. These numbers have not passed a disclosure review: the data "
         "owner's rules decide what may leave.",
         width,
@@ -79,17 +87,19 @@ def result_lines(
     return lines
 
 
-def _wrapped(sentence: str, width: int) -> list[str]:
+def wrapped_lines(sentence: str, width: int) -> list[str]:
+    """A sentence as lines of at most `width` columns."""
     return textwrap.wrap(sentence, width, break_long_words=False, break_on_hyphens=False)
 
 
-def _item(sentence: str, width: int) -> list[str]:
-    lines = _wrapped(sentence, width - 2)
+def item_lines(sentence: str, width: int) -> list[str]:
+    """A sentence as one item of a list."""
+    lines = wrapped_lines(sentence, width - 2)
     return [f"{'·' if i == 0 else ' '} {line}" for i, line in enumerate(lines)]
 
 
-def _rows_sentence(result: Result) -> str:
-    assigned = result.assigned
+def rows_sentence(assigned: Assigned) -> str:
+    """Rows read, used, left out and why, and outcomes that are missing."""
     used = int(np.sum(assigned.reason == 0))
     dropped = ", ".join(f"{count:,} {reason}" for reason, count in assigned.dropped.items() if count)
     said = f"{plural(assigned.rows_read, 'row')} read, {used:,} on one side of the line or the other"
@@ -124,7 +134,7 @@ def _answers(effect: Effect, width: int) -> list[str]:
         fitted += [" " * start + piece for piece in pieces[1:]]
     for row in rows:
         if row.reason is not None:
-            fitted += ["", *_wrapped(f"{row.name}: {row.reason}", width)]
+            fitted += ["", *wrapped_lines(f"{row.name}: {row.reason}", width)]
     return fitted
 
 
@@ -146,10 +156,10 @@ def _sites(comparison: Comparison, result: Result, width: int) -> list[str]:
         )
         for row in rows
     ]
-    lines = _wrapped(opening(comparison, result.study), width)
+    lines = wrapped_lines(opening(comparison, result.study), width)
     lines += ["", *table_lines([head, *body], right=tuple(range(1, 10)), indent=0, gap=2), ""]
     for sentence in sentences(comparison):
-        lines += _item(sentence, width)
+        lines += item_lines(sentence, width)
     return lines
 
 
@@ -186,7 +196,7 @@ def _families(result: Result, width: int) -> list[str]:
         if not any(one.has(f.where) for one in result.comparisons)
     ]
     return [
-        *_wrapped(
+        *wrapped_lines(
             "Several outcomes were asked about; p-values of the robust answer, alone and held to the family:",
             width,
         ),

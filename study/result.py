@@ -16,6 +16,7 @@ from study.assemble import Assigned
 from study.comparison import Comparison
 from study.comparison_document import comparisons_document
 from study.document import Study
+from study.record import Record
 from study.result_parts import interval_document, number, randomisation_document
 
 FORMAT: Final = "cutbank-result"
@@ -53,33 +54,18 @@ class Result:
     failures: tuple[OutcomeFailure, ...]
     families: tuple[Family, ...]
     comparisons: tuple[Comparison, ...] = ()
+    record: Record | None = None
 
     def to_document(self) -> dict[str, Any]:
         """The result document; what can't be computed is None with a reason beside it."""
         study, assigned = self.study, self.assigned
         return {
-            "format": FORMAT,
-            "version": VERSION,
-            "study": {
-                "title": study.title,
-                "file": study.path.name,
-                "seed": study.seed,
-                "sealed": False,
-                "looked_at": None,
-                "looked_at_reason": "this version keeps no ledger",
-            },
-            "data": {
-                "rows_read": assigned.rows_read,
-                "rows_used": int(np.sum(assigned.reason == 0)),
-                "dropped": dict(assigned.dropped),
-                "missing_outcomes": {
-                    name: int(np.isnan(column[assigned.reason == 0]).sum())
-                    for name, column in assigned.outcomes.items()
-                },
-                "fingerprint": assigned.fingerprint,
-                **({} if assigned.border is None else {"border_notes": list(assigned.border.notes)}),
-            },
-            "effects": [effect_document(effect) for effect in self.effects],
+            **document_head(study, assigned, self.record),
+            "effects": [
+                effect_document(effect)
+                | ({} if self.record is None else {"departs": list(self.record.departs(effect.outcome))})
+                for effect in self.effects
+            ],
             "not_estimated": [
                 {
                     "outcome": failure.outcome,
@@ -110,6 +96,35 @@ class Result:
                 "reason": "nothing was released: this document holds unrounded numbers and stays where the data are",
             },
         }
+
+
+def document_head(study: Study, assigned: Assigned, record: Record | None) -> dict[str, Any]:
+    """What every result document begins with: its version, the study and the data."""
+    return {
+        "format": FORMAT,
+        "version": VERSION,
+        "study": {
+            "title": study.title,
+            "file": study.path.name,
+            "seed": study.seed,
+            **(
+                {"sealed": False, "looked_at": None, "looked_at_reason": "this run was not recorded"}
+                if record is None
+                else record.to_document()
+            ),
+        },
+        "data": {
+            "rows_read": assigned.rows_read,
+            "rows_used": int(np.sum(assigned.reason == 0)),
+            "dropped": dict(assigned.dropped),
+            "missing_outcomes": {
+                name: int(np.isnan(column[assigned.reason == 0]).sum())
+                for name, column in assigned.outcomes.items()
+            },
+            "fingerprint": assigned.fingerprint,
+            **({} if assigned.border is None else {"border_notes": list(assigned.border.notes)}),
+        },
+    }
 
 
 def adjust_for_many(effects: Sequence[Effect]) -> tuple[Family, ...]:

@@ -90,7 +90,8 @@ def fresh_copy(shipped: Path, place: Path) -> Path:
             except FileExistsError:
                 number += 1
         for source in sorted(shipped.iterdir()):
-            if source.is_file():
+            # What a run left beside the shipped study is no part of the demo.
+            if source.is_file() and not source.name.endswith((".jsonl", ".plan.json")):
                 shutil.copyfile(source, folder / source.name)
     except OSError as error:
         raise StudyError(
