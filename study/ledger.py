@@ -223,7 +223,8 @@ def summary(reading: Reading, study: Study, *, sealed: bool) -> str:
         estimates, ways = reading.estimates, reading.specifications
         said = (
             f"{estimates:,} {'estimate' if estimates == 1 else 'estimates'} under {ways:,} "
-            f"{'specification was' if ways == 1 else 'different specifications were'} looked at"
+            f"{'specification' if ways == 1 else 'different specifications'} "
+            f"{'was' if estimates == 1 else 'were'} looked at"
         )
         said += "; the planned one is reported." if sealed else "; no plan was sealed beforehand."
     if reading.problems:
