@@ -1,14 +1,14 @@
 r"""The ladder: the fit at the line for any bandwidths, from running sums.
 
-Answers what `estimation.local_polynomial.fit_rows` answers with nearest-neighbour variances, to 1e-10, in a
-time that does not grow with the rows. All queries are vectors of bandwidths; one width is a vector of one.
+Answers what `estimation.local_polynomial.fit_rows` answers with nearest-neighbour variances (and HC0 and HC1, on
+a ladder `with_squares`), to 1e-10, in a time that does not grow with the rows. All queries are vectors of bandwidths; one width is a vector of one.
 """
 
 from __future__ import annotations
 
 from collections.abc import Sequence
 from concurrent.futures import ThreadPoolExecutor
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -24,9 +24,12 @@ from estimation.moments import (
     combine,
     hankel,
     kernel_coefficients,
+    multiply,
     solve,
+    weights_polynomial,
 )
 from estimation.sample import Sample, Side, SideName
+from estimation.squares import FITTED, SideSquares, Spread, Weights, degrees_factor
 from estimation.variance import neighbour_residuals
 
 
@@ -40,7 +43,7 @@ class Widths:
     pilot_above: Vector
 
     @classmethod
-    def of(cls, bandwidths: Bandwidths) -> Widths:
+    def single(cls, bandwidths: Bandwidths) -> Widths:
         """One query."""
         b = bandwidths
         return cls(
@@ -48,6 +51,19 @@ class Widths:
             above=np.array([b.above]),
             pilot_below=np.array([b.pilot_below]),
             pilot_above=np.array([b.pilot_above]),
+        )
+
+    def of(self, side: SideName) -> tuple[Vector, Vector]:
+        """(bandwidth, pilot bandwidth) of one side."""
+        return (self.below, self.pilot_below) if side == "below" else (self.above, self.pilot_above)
+
+    def part(self, some: slice) -> Widths:
+        """Some of the queries."""
+        return Widths(
+            below=self.below[some],
+            above=self.above[some],
+            pilot_below=self.pilot_below[some],
+            pilot_above=self.pilot_above[some],
         )
 
     @classmethod
@@ -73,6 +89,7 @@ class LineFits:
     count_below: Codes
     count_above: Codes
     effective: Vector
+    clusters: Codes | None = None
 
     def at(self, i: int) -> LineFit:
         """One of them."""
@@ -88,7 +105,7 @@ class LineFits:
             count_below=int(self.count_below[i]),
             count_above=int(self.count_above[i]),
             effective=float(self.effective[i]),
-            clusters=None,
+            clusters=None if self.clusters is None else int(self.clusters[i]),
         )
 
 
@@ -103,6 +120,7 @@ class Ladder:
     treated_sign: float
     targets: int
     resolution: float
+    squares: tuple[SideSquares, SideSquares] | None = None
 
     @classmethod
     def build(cls, sample: Sample, *, kernel: str, order: int, adjust: bool = False) -> Ladder:
@@ -145,6 +163,16 @@ class Ladder:
             resolution=sample.resolution,
         )
 
+    def with_squares(self, sample: Sample) -> Ladder:
+        """The same ladder, able to answer with "hc0" and "hc1"; `sample` is what it was built from."""
+
+        def sums(named: tuple[SideName, Side]) -> SideSquares:
+            return SideSquares.build(named[1], self.below.centre, kernel=self.kernel, order=self.order)
+
+        with ThreadPoolExecutor(2) as pool:
+            below, above = pool.map(sums, sample.sides)
+        return replace(self, squares=(below, above))
+
     @classmethod
     def merge(cls, ladders: Sequence[Ladder]) -> Ladder:
         """One ladder over the rows of all: its sums are theirs added.
@@ -174,7 +202,14 @@ class Ladder:
             resolution=resolution,
         )
 
-    def fit(self, bandwidths: Bandwidths, *, order: int | None = None, adjust: bool = False) -> LineFit:
+    def fit(
+        self,
+        bandwidths: Bandwidths,
+        *,
+        order: int | None = None,
+        adjust: bool = False,
+        variance: str = "neighbour",
+    ) -> LineFit:
         """The fit at one pair of widths.
 
         Raises
@@ -189,7 +224,7 @@ class Ladder:
                 found = int(side.distinct(np.array([width]), self.kernel)[0])
                 if found < p + 2:
                     raise too_few(found, bandwidth=width, name=side.name, order=p)
-        fit = self.fits(Widths.of(bandwidths), order=order, adjust=adjust).at(0)
+        fit = self.fits(Widths.single(bandwidths), order=order, adjust=adjust, variance=variance).at(0)
         if not np.all(np.isfinite(fit.robust_jump)):
             raise CannotEstimate(
                 "The scores inside the bandwidth are too alike to carry a fit of this order.",
@@ -202,11 +237,28 @@ class Ladder:
             )
         return fit
 
-    def fits(self, widths: Widths, *, order: int | None = None, adjust: bool = False) -> LineFits:
-        """The fit at each pair of widths, NaN where it can't run."""
+    def fits(
+        self, widths: Widths, *, order: int | None = None, adjust: bool = False, variance: str = "neighbour"
+    ) -> LineFits:
+        """The fit at each pair of widths, NaN where it can't run.
+
+        `variance` is "neighbour", or "hc0" or "hc1" on a ladder `with_squares`.
+        """
         order = self.order if order is None else order
-        low = _side_fits(self.below, widths.below, widths.pilot_below, self.kernel, order)
-        high = _side_fits(self.above, widths.above, widths.pilot_above, self.kernel, order)
+        if variance in FITTED and self.squares is None:
+            raise ValueError(f"this ladder holds no squares for {variance}; build it with_squares")
+        squares = self.squares if variance in FITTED else None
+        low, high = (
+            _side_fits(
+                side,
+                None if squares is None else squares[i],
+                *widths.of(side.name),
+                self.kernel,
+                order,
+                variance,
+            )
+            for i, side in enumerate((self.below, self.above))
+        )
         sign = self.treated_sign
         queries = len(widths.below)
         return LineFits(
@@ -240,7 +292,15 @@ class _SideFits:
     partial_products: Cube
 
 
-def _side_fits(side: SideSums, bandwidth: Vector, pilot: Vector, kernel: str, order: int) -> _SideFits:
+def _side_fits(
+    side: SideSums,
+    squares: SideSquares | None,
+    bandwidth: Vector,
+    pilot: Vector,
+    kernel: str,
+    order: int,
+    variance: str,
+) -> _SideFits:
     """One side's level at the line, plain and bias-corrected, with its variances, at each width."""
     channels, shape = side.channels, kernel_coefficients(kernel)
     size = order + 1
@@ -258,17 +318,30 @@ def _side_fits(side: SideSums, bandwidth: Vector, pilot: Vector, kernel: str, or
     level_weights, fitted = solved[:, :, 0], solved[:, :, 1:]
     last = np.zeros((len(bandwidth), size + 1, 1), dtype=np.longdouble)
     last[:, -1] = 1.0
-    top = solve(hankel(pilot_moments[:, :, 0], size + 1), last)[:, :, 0]
+    pilot_first = pilot_moments[:, : size + 1, channels.first]
+    solved = solve(hankel(pilot_moments[:, :, 0], size + 1), np.concatenate((last, pilot_first), axis=2))
+    top, pilot_fitted = solved[:, :, 0], solved[:, :, 1:]
     # Σ l d^(p+1) is in units of h^(p+1), the pilot's coefficient in units of b^(−p−1).
     left_over = np.einsum("hj,hj->h", level_weights, moments[:, size : 2 * size, 0])
     ratio = (bandwidth / pilot).astype(np.longdouble) ** size
     correction = top * (left_over * ratio)[:, None]
 
     level = fitted[:, 0]
-    shift = np.einsum("hj,hja->ha", correction, pilot_moments[:, : size + 1, channels.first])
-    plain = _cross(side, kernel, (bandwidth, level_weights), (bandwidth, level_weights), raw)
-    mixed = _cross(side, kernel, (bandwidth, level_weights), (pilot, correction), raw if same else None)
-    pilots = _cross(side, kernel, (pilot, correction), (pilot, correction), pilot_raw)
+    shift = np.einsum("hj,hja->ha", correction, pilot_first)
+    spread = (
+        _neighbour_spread(side, kernel, ((bandwidth, raw), (pilot, pilot_raw)))
+        if squares is None
+        else squares.spread(kernel)
+    )
+    near, far = (bandwidth, level_weights), (pilot, correction)
+    # Row by row, l_bc takes its residuals from the pilot's curve, also where that is continued past the pilot.
+    curve = (pilot, pilot_fitted)
+    plain = spread(near, near, (bandwidth, fitted))
+    corrected = plain if squares is None else spread(near, near, curve)
+    robust = corrected - 2.0 * spread(near, far, curve) + spread(far, far, curve)
+    count = side.count(bandwidth, kernel)
+    plain *= degrees_factor(count, size, variance)[:, None, None]
+    robust *= degrees_factor(side.count(pilot, kernel), size + 1, variance)[:, None, None]
     squared = combine(raw, np.convolve(shape, shape), 1)[:, 0, channels.squared_weight]
     products = (
         channels.symmetric(moments[:, 0, channels.products]) - np.einsum("hja,hjb->hab", fitted, first)
@@ -279,48 +352,29 @@ def _side_fits(side: SideSums, bandwidth: Vector, pilot: Vector, kernel: str, or
         level=(level + side.centre).astype(np.float64),
         robust_level=(level - shift + side.centre).astype(np.float64),
         covariance=plain.astype(np.float64),
-        robust_covariance=(plain - 2.0 * mixed + pilots).astype(np.float64),
+        robust_covariance=robust.astype(np.float64),
         unit_bias=_unit_bias(side, kernel, bandwidth, level_weights, moments),
-        count=side.count(bandwidth, kernel),
+        count=count,
         effective=(moments[:, 0, 0] ** 2 / np.where(squared > 0.0, squared, np.nan)).astype(np.float64),
         partial_products=products.astype(np.float64),
     )
 
 
-def _cross(
-    side: SideSums,
-    kernel: str,
-    first: tuple[Vector, Extended],
-    second: tuple[Vector, Extended],
-    raw: Extended | None,
-) -> Extended:
-    """Σ l m e e′ for weights l = a·r(d/h)·K(d/h)·w and m = c·r(d/b)·K(d/b)·w, shape (H, v, v).
+def _neighbour_spread(side: SideSums, kernel: str, raws: Sequence[tuple[Vector, Extended]]) -> Spread:
+    """Σ l m e e′ with the residuals that were summed with the rows; `raws` are sums known at some widths."""
 
-    `raw` are the sums at the nearer of the two widths in units of it, where the caller has them.
-    """
-    (h, a), (b, c) = first, second
-    reach = np.minimum(h, b)
-    sums = side.raw(reach, reach, kernel) if raw is None else raw
-    polynomial = _convolve(
-        _weights_polynomial(kernel, a, reach / h), _weights_polynomial(kernel, c, reach / b)
-    )
-    spread = np.einsum("hr,hrp->hp", polynomial, sums[:, : polynomial.shape[1], side.channels.spread])
-    return np.asarray(side.channels.symmetric(spread))
+    def spread(first: Weights, second: Weights, _: Weights) -> Extended:
+        (h, a), (b, c) = first, second
+        reach = np.minimum(h, b)
+        polynomial = multiply(
+            weights_polynomial(kernel, a, reach / h), weights_polynomial(kernel, c, reach / b)
+        )
+        known = [sums for width, sums in raws if np.array_equal(width, reach)]
+        sums = known[0] if known else side.raw(reach, reach, kernel)
+        summed = np.einsum("hr,hrp->hp", polynomial, sums[:, : polynomial.shape[1], side.channels.spread])
+        return np.asarray(side.channels.symmetric(summed))
 
-
-def _weights_polynomial(kernel: str, coefficients: Extended, ratio: Vector) -> Extended:
-    """K(d/h)·Σ a_j (d/h)^j as a polynomial in d/reach with `ratio` = reach/h, shape (H, degree + p + 1)."""
-    shape = np.broadcast_to(kernel_coefficients(kernel), (len(ratio), len(COEFFICIENTS[kernel])))
-    product = _convolve(shape, coefficients)
-    return np.asarray(product * ratio.astype(np.longdouble)[:, None] ** np.arange(product.shape[1]))
-
-
-def _convolve(left: Extended, right: Extended) -> Extended:
-    """Products of polynomials row by row, shape (H, m + n − 1)."""
-    product = np.zeros((len(left), left.shape[1] + right.shape[1] - 1), dtype=np.longdouble)
-    for m in range(left.shape[1]):
-        product[:, m : m + right.shape[1]] += left[:, m, None] * right
-    return product
+    return spread
 
 
 def _unit_bias(
@@ -333,7 +387,7 @@ def _unit_bias(
     if size == 2:
         second = np.einsum("hj,hj->h", level_weights, moments[:, 2 : 2 + size, 0]).astype(np.float64)
         return np.asarray(0.5 * np.abs(second) * bandwidth**2)
-    polynomial = _weights_polynomial(kernel, level_weights, np.ones(len(bandwidth)))
+    polynomial = weights_polynomial(kernel, level_weights, np.ones(len(bandwidth)))
     return np.array(
         [_integral(side, kernel, float(h), row) for h, row in zip(bandwidth, polynomial, strict=True)]
     )

@@ -35,10 +35,14 @@ Extended = npt.NDArray[np.longdouble]
 
 @dataclass(frozen=True)
 class Channels:
-    """Where each sum stands among the columns, for v variables."""
+    """Where each sum stands among the columns, for v variables.
+
+    `with_spread` keeps Σ w² and Σ w² e e′; `with_products` keeps Σ w v v′.
+    """
 
     variables: int
     with_products: bool
+    with_spread: bool = True
 
     @cached_property
     def pairs(self) -> tuple[npt.NDArray[np.intp], npt.NDArray[np.intp]]:
@@ -53,13 +57,14 @@ class Channels:
 
     @cached_property
     def squared_weight(self) -> int:
-        """Σ w²."""
+        """Σ w²; there only with the spread."""
         return 1 + self.variables
 
     @cached_property
     def spread(self) -> slice:
-        """Σ w² e_a e_b over the pairs."""
-        return slice(self.squared_weight + 1, self.squared_weight + 1 + len(self.pairs[0]))
+        """Σ w² e_a e_b over the pairs; empty unless `with_spread`."""
+        start = self.squared_weight + self.with_spread
+        return slice(start, start + len(self.pairs[0]) * self.with_spread)
 
     @cached_property
     def products(self) -> slice:
@@ -80,14 +85,16 @@ class Channels:
         columns = np.empty((len(values), self.products.stop))
         columns[:, 0] = 1.0 if weight is None else weight
         columns[:, self.first] = values
-        columns[:, self.squared_weight] = 1.0 if weight is None else weight
-        columns[:, self.spread] = residual[:, a] * residual[:, b]
+        if self.with_spread:
+            columns[:, self.squared_weight] = 1.0 if weight is None else weight
+            columns[:, self.spread] = residual[:, a] * residual[:, b]
         if self.with_products:
             columns[:, self.products] = values[:, a] * values[:, b]
         if weight is not None:
             columns[:, self.first] *= weight[:, None]
-            columns[:, self.squared_weight] *= weight
-            columns[:, self.spread] *= (weight * weight)[:, None]
+            if self.with_spread:
+                columns[:, self.squared_weight] *= weight
+                columns[:, self.spread] *= (weight * weight)[:, None]
             columns[:, self.products] *= weight[:, None]
         return columns
 
@@ -110,7 +117,7 @@ class Rungs:
     side
         The rows, nearest first.
     residual
-        Residuals that make the variance, shape (n, v).
+        Residuals that make the variance, shape (n, v); not read without `Channels.with_spread`.
     centre
         Taken off the values before they are summed, shape (v,), so that a common level costs no digits.
     reach
@@ -131,10 +138,18 @@ class Rungs:
 
     @classmethod
     def build(
-        cls, side: Side, residual: Matrix, centre: Vector, *, powers: int, with_products: bool, extended: bool
+        cls,
+        side: Side,
+        residual: Matrix,
+        centre: Vector,
+        *,
+        powers: int,
+        with_products: bool,
+        extended: bool,
+        with_spread: bool = True,
     ) -> Rungs:
         """Sum one side once, in stretches that stay in the processor's cache."""
-        channels = Channels(side.values.shape[1], with_products)
+        channels = Channels(side.values.shape[1], with_products, with_spread)
         reach = float(side.distance[-1]) or 1.0
         blocks = len(side) // BLOCK
         kind = np.longdouble if extended else np.float64
@@ -282,6 +297,7 @@ def _recentred(part: Rungs, centre: Vector) -> Rungs:
         powers=part.running.shape[1],
         with_products=part.channels.with_products,
         extended=part.extended,
+        with_spread=part.channels.with_spread,
     )
 
 
@@ -305,6 +321,21 @@ def combine(raw: Extended, coefficients: Extended, powers: int) -> Extended:
 def kernel_coefficients(kernel: str) -> Extended:
     """Coefficients of the kernel in u, shape (degree + 1,)."""
     return np.array(COEFFICIENTS[kernel], dtype=np.longdouble)
+
+
+def multiply(left: Extended, right: Extended) -> Extended:
+    """Products of polynomials row by row, shape (H, m + n − 1)."""
+    product = np.zeros((len(left), left.shape[1] + right.shape[1] - 1), dtype=np.longdouble)
+    for m in range(left.shape[1]):
+        product[:, m : m + right.shape[1]] += left[:, m, None] * right
+    return product
+
+
+def weights_polynomial(kernel: str, coefficients: Extended, ratio: Vector) -> Extended:
+    """K(d/h)·Σ a_j (d/h)^j as a polynomial in d/reach with `ratio` = reach/h, shape (H, degree + p + 1)."""
+    shape = np.broadcast_to(kernel_coefficients(kernel), (len(ratio), len(COEFFICIENTS[kernel])))
+    product = multiply(shape, coefficients)
+    return np.asarray(product * ratio.astype(np.longdouble)[:, None] ** np.arange(product.shape[1]))
 
 
 def hankel(moments: Extended, size: int) -> Extended:

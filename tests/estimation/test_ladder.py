@@ -87,6 +87,71 @@ def test_the_ladder_is_the_rows(kernel: str, order: int, kind: dict[str, object]
         agree(ladder.fit(widths, adjust=True), slow, 1e-10 if kind.get("level") is None else 1e-8)
 
 
+@pytest.mark.parametrize("kernel", ["triangular", "uniform", "epanechnikov"])
+@pytest.mark.parametrize("order", [0, 1, 2, 3])
+@pytest.mark.parametrize(
+    "kind",
+    [
+        {},
+        {"ties": True},
+        {"weighted": True, "treated": "below"},
+        {"offset": 1e6, "unit": 1e3, "ties": True, "weighted": True},
+        {"unit": 1e-6},
+        {"level": 1e5},
+    ],
+)
+def test_fitted_residuals_are_the_rows_at_any_width(kernel: str, order: int, kind: dict[str, object]) -> None:
+    # 2,000 rows: some blocks of running sums, and rows after the last of them.
+    sample = draw(2000, seed=40 + order, **kind)  # type: ignore[arg-type]
+    unit = float(kind.get("unit", 1.0))  # type: ignore[arg-type]
+    ladder = Ladder.build(sample, kernel=kernel, order=order, adjust=True).with_squares(sample)
+    for pair in WIDTHS:
+        below, above, pilot_below, pilot_above = (unit * width for width in pair)
+        widths = Bandwidths(
+            below=below, above=above, pilot_below=pilot_below, pilot_above=pilot_above, rule="chosen"
+        )
+        for variance in ("hc0", "hc1"):
+            fast = ladder.fit(widths, adjust=True, variance=variance)
+            slow = fit_rows(sample, widths, kernel=kernel, order=order, variance=variance, adjust=True)
+            for name in ("covariance", "robust_covariance"):
+                one, other = getattr(fast, name), getattr(slow, name)
+                scale = np.sqrt(np.outer(np.diagonal(other), np.diagonal(other)))
+                assert one / scale == pytest.approx(other / scale, rel=1e-10, abs=1e-10), name
+            assert fast.robust_jump == pytest.approx(ladder.fit(widths).robust_jump, rel=1e-13)
+
+
+def test_fitted_residuals_of_a_steep_outcome_keep_their_digits() -> None:
+    # A squared outcome is ten million times its squared noise: without the trend taken off first, the expansion
+    # would have lost seven digits.
+    rng = np.random.default_rng(8)
+    x = np.where(rng.uniform(size=4000) < 0.05, 0.0, rng.uniform(-1, 1, 4000))
+    y = 300 * x + 20 * x**2 + rng.normal(0, 0.1, 4000)
+    sample = build_sample(position=x, outcome=y, above=x >= 0, treated="above", score_magnitude=1.0)
+    ladder = Ladder.build(sample, kernel="triangular", order=1).with_squares(sample)
+    for width in (0.05, 0.3, 1.0):
+        widths = Bandwidths.common(width, 0.8)
+        slow = fit_rows(sample, widths, kernel="triangular", order=1, variance="hc0")
+        fast = ladder.fit(widths, variance="hc0")
+        assert fast.covariance == pytest.approx(slow.covariance, rel=1e-10)
+        assert fast.robust_covariance == pytest.approx(slow.robust_covariance, rel=1e-10)
+
+
+def test_many_widths_with_fitted_residuals_are_the_widths_one_by_one() -> None:
+    sample = draw(3000, seed=6)
+    ladder = Ladder.build(sample, kernel="epanechnikov", order=1).with_squares(sample)
+    grid = np.array([1e-6, 0.03, 0.5, 1.0, 3.0])
+    fits = ladder.fits(Widths.common(grid, 0.9), variance="hc1")
+    assert np.isnan(fits.covariance[0]).all()
+    for i in range(1, len(grid)):
+        agree(fits.at(i), ladder.fit(Bandwidths.common(float(grid[i]), 0.9), variance="hc1"), 1e-12)
+
+
+def test_a_ladder_without_squares_says_so() -> None:
+    sample = draw(300)
+    with pytest.raises(ValueError, match="with_squares"):
+        Ladder.build(sample, kernel="uniform", order=1).fit(Bandwidths.common(0.8), variance="hc0")
+
+
 def test_lower_orders_are_asked_of_a_higher_ladder() -> None:
     sample = draw(seed=4)
     ladder = Ladder.build(sample, kernel="triangular", order=3)
