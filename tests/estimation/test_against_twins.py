@@ -320,3 +320,16 @@ def test_a_global_fit_is_the_width_without_end():
     everything = one_side_weights(side, math.inf, 3, "triangular", part, 2)
     wide = one_side_weights(side, 100.0, 3, "uniform", part, 2)
     np.testing.assert_allclose(everything.astype(float), wide.astype(float), atol=1e-13)
+
+
+@pytest.mark.parametrize("per_side", [False, True])
+def test_with_take_up_both_equations_share_the_smaller_width(per_side):
+    a = sample("plain")
+    rng = np.random.default_rng(12)
+    for slope in (0.0, 1.5):  # a bend in take-up that is slight, then strong
+        t = (rng.random(len(a.x)) < 0.2 + 0.5 * a.above * np.exp(-slope * np.abs(a.x))).astype(float)
+        built = build_sample(position=a.x, outcome=a.y, above=a.above, treated="above", take_up=t)
+        rule = "mse per side" if per_side else "mse"
+        found = Line.prepare(built, Choices(bandwidth=rule)).bandwidths()
+        both = [bandwidth_twin.mse(a.x, v, a.above, 1, per_side=per_side, ticks=a.ticks) for v in (a.y, t)]
+        np.testing.assert_allclose([found.below, found.above], np.min(both, axis=0)[:2], rtol=1e-8)
