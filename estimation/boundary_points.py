@@ -31,6 +31,9 @@ from estimation.arrays import Codes, Cube, Mask, Matrix, Vector
 from estimation.kernels import kernel_values
 
 FEWEST_ROWS: Final = 20
+# A plane has three coefficients: with few clusters a side it passes through their means, and their residuals, summed by
+# cluster, all but vanish. The error would be a pretence (no source; twice the coefficients).
+FEWEST_CLUSTERS: Final = 6
 FEWEST_DEGREES: Final = 5.0
 FEW_DEGREES: Final = 15.0
 BAND_DRAWS: Final = 20_000
@@ -135,6 +138,7 @@ def point_effects(
     second = _Collected(count)
     rows = np.zeros((2, count), dtype=np.int64)
     reasons = [""] * count
+    most_degrees = np.full(count, np.inf)
     for k in range(count):
         offset = (places - points[k]) @ frames[k].T / bandwidth
         near = np.flatnonzero((offset**2).sum(axis=1) < 1.0)
@@ -143,6 +147,12 @@ def point_effects(
         if rows[:, k].min() < FEWEST_ROWS:
             reasons[k] = f"fewer than {FEWEST_ROWS} rows on a side within the width"
             continue
+        if cluster is not None:
+            groups = [len(np.unique(cluster[near[rows_of]])) for rows_of in (~side, side)]
+            if min(groups) < FEWEST_CLUSTERS:
+                reasons[k] = f"fewer than {FEWEST_CLUSTERS} clusters on a side within the width"
+                continue
+            most_degrees[k] = len(np.unique(cluster[near])) - 1.0
         given = None if weight is None else weight[near]
         for order, collected in ((1, first), (2, second)):
             fits = [
@@ -160,7 +170,7 @@ def point_effects(
                 continue
             below, above = (fit for fit in fits if fit is not None)
             collected.add(k, near, side, below, above)
-    thin = first.degrees < FEWEST_DEGREES
+    thin = np.minimum(first.degrees, most_degrees) < FEWEST_DEGREES
     for place in np.flatnonzero(thin).tolist():
         reasons[place] = reasons[place] or f"under {FEWEST_DEGREES:g} degrees of freedom"
     estimate = np.where(thin, np.nan, first.estimate)
@@ -170,9 +180,7 @@ def point_effects(
     error = np.sqrt(np.diagonal(covariance))
     known = np.isfinite(estimate) & np.isfinite(error)
     critical = _critical(covariance[np.ix_(known, known)], level, seed)
-    degrees = np.where(known, first.degrees, np.nan)
-    if cluster is not None:
-        degrees = np.minimum(degrees, len(np.unique(cluster)) - 1.0)
+    degrees = np.where(known, np.minimum(first.degrees, most_degrees), np.nan)
     reach = nothing.copy()
     reach[known] = stdtrit(degrees[known], 0.5 * (1.0 + level)) * error[known]
     band = nothing.copy()

@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass, replace
 from functools import cached_property
-from typing import Final
+from typing import TYPE_CHECKING, Final
 
 import numpy as np
 
@@ -17,6 +17,7 @@ from estimation.line_fit import Bandwidths
 from estimation.randomisation import Randomisation, randomise
 from estimation.reading import Reading
 from estimation.sample import Sample, build_sample, outward_order
+from estimation.site_ladder import SiteLadder
 from estimation.variance import mass_point_starts
 from estimation.window import choose_window
 from study.assemble import Assigned, assemble
@@ -26,6 +27,10 @@ from study.errors import CANNOT_ESTIMATE, Masked, StudyError
 from study.literal import clean
 from study.plan import is_masked
 from study.result import OutcomeFailure, Result, adjust_for_many
+from study.site_readings import SitesAtOnce, can_be_read_at_once
+
+if TYPE_CHECKING:
+    from study.border_result import AlongBorder
 
 NEAREST_FOR_WINDOW: Final = 50_000
 
@@ -98,6 +103,7 @@ class Workbench:
         )
         self._lines: dict[_Need, Line] = {} if kept is None else kept._lines
         self._chosen: dict[tuple[str, str | None], Bandwidths] = {}
+        self._at_once: dict[tuple[str, str, int, float], SitesAtOnce] = {} if kept is None else kept._at_once
         self._randomised: dict[tuple[object, ...], Randomisation | str] = (
             {} if kept is None else kept._randomised
         )
@@ -177,11 +183,11 @@ class Workbench:
         if line is None:
             full = self._sample(outcome, site, covariates) if covariates else None
             line = Line.prepare(self._sample(outcome, site, ()), choices, with_covariates=full)
-            line = replace(line, cap=self._cap(site))
+            line = replace(line, cap=self.cap(site))
             self._lines[need] = line
         return line if line.choices == choices else line.choosing(choices)
 
-    def _cap(self, site: str | None) -> tuple[float, float]:
+    def cap(self, site: str | None) -> tuple[float, float]:
         """Largest widths (below, above): with steps on one score, half-way to the next, so that no row serves two.
 
         Pooled over steps it is the nearest half-way of all, beyond which some steps have rows and others none.
@@ -195,6 +201,37 @@ class Workbench:
         around = np.concatenate(([np.inf], half, [np.inf]))
         place = int(np.argmin(np.abs(steps - self.cutoff(site))))
         return (float(around[place]), float(around[place + 1]))
+
+    def sites_at_once(self, outcome: str) -> SitesAtOnce | None:
+        """All sites' sums in one ladder; None where the study's choices need each site's rows."""
+        choices, a = self.study.estimate, self.assigned
+        self._refuse_masked(outcome)
+        if a.site is None or not can_be_read_at_once(choices, clustered=a.cluster is not None):
+            return None
+        key = (outcome, choices.kernel, choices.order, choices.donut)
+        if key not in self._at_once:
+            take_up = () if a.take_up is None else (a.take_up,)
+            columns = (a.outcomes[outcome], *take_up)
+            used = self._used & (a.site >= 0) & (np.abs(a.position) >= choices.donut)
+            for column in columns:
+                used = used & ~np.isnan(column)
+            rows = np.flatnonzero(used)
+            self._at_once[key] = SitesAtOnce.of(
+                SiteLadder.build(
+                    position=a.position[rows],
+                    values=np.column_stack([column[rows] for column in columns]),
+                    above=a.above[rows],
+                    site=a.site[rows],
+                    sites=len(self.sites),
+                    weight=None if a.weight is None else a.weight[rows],
+                    treated=a.treated,
+                    kernel=choices.kernel,
+                    order=choices.order,
+                    has_take_up=a.take_up is not None,
+                    score_magnitude=self._score_magnitude,
+                )
+            )
+        return self._at_once[key]
 
     def chosen(self, outcome: str, site: str | None = None) -> Bandwidths:
         """The bandwidths that the study asks for."""
@@ -285,6 +322,11 @@ class Workbench:
         found = self._cutoff(site)
         return float("nan") if found is None else found
 
+    def outcome_values(self, outcome: str) -> Vector:
+        """The outcome of every row read, NaN where missing, in file order; refused while masked."""
+        self._refuse_masked(outcome)
+        return self.assigned.outcomes[outcome]
+
     def rows_with(self, outcome: str, site: str | None = None) -> tuple[int, int]:
         """Assigned rows with the outcome known, below and above."""
         column = self.assigned.outcomes[outcome]
@@ -373,7 +415,17 @@ class Workbench:
             failures=tuple(failures),
             families=adjust_for_many(effects),
             comparisons=self._comparisons(progress),
+            along=self._along_border(progress),
         )
+
+    def _along_border(self, progress: Callable[[str], None] | None) -> tuple[AlongBorder, ...]:
+        if self.assigned.border is None:
+            return ()
+        from study.border_points import along_border  # it stands on this module
+
+        if progress is not None:
+            progress("Estimating along the border")
+        return tuple(along_border(self, outcome) for outcome in self.outcomes)
 
     def _comparisons(self, progress: Callable[[str], None] | None) -> tuple[Comparison, ...]:
         found = []
@@ -388,15 +440,27 @@ class Workbench:
         used: Mask = self.assigned.reason == 0
         return used
 
+    @cached_property
+    def _place_of(self) -> dict[str, int]:
+        return {name: i for i, name in enumerate(self.sites)}
+
+    @cached_property
+    def _rows_by_site(self) -> list[Codes]:
+        """Used rows of each site in file order, from one sort."""
+        site = self.assigned.site
+        assert site is not None  # asked only where there are sites
+        rows = np.flatnonzero(self._used)
+        order = rows[np.argsort(site[rows], kind="stable")]
+        ends = np.searchsorted(site[order], np.arange(len(self.sites) + 1))
+        return [order[a:b] for a, b in zip(ends[:-1], ends[1:])]
+
     def _rows(self, site: str | None) -> Codes:
         return np.concatenate(self._outward(site))
 
     def _outward(self, site: str | None) -> tuple[Codes, Codes]:
         """Rows of the lower and the upper side, nearest first, as indices into the file's rows."""
         if site not in self._orders:
-            rows = np.flatnonzero(self._used)
-            if site is not None and self.assigned.site is not None:
-                rows = rows[self.assigned.site[rows] == self.sites.index(site)]
+            rows = np.flatnonzero(self._used) if site is None else self._rows_by_site[self._place_of[site]]
             lower, upper = outward_order(self.assigned.position[rows], self.assigned.above[rows])
             self._orders[site] = (rows[lower], rows[upper])
         return self._orders[site]
@@ -405,18 +469,26 @@ class Workbench:
         key = (outcome, site, covariates)
         if key not in self._samples:
             a = self.assigned
-            matrix = np.column_stack([a.covariates[name] for name in covariates]) if covariates else None
+            sort, rows = self._outward(site), slice(None)
+            if site is not None:
+                # Of a site only its own rows are touched: many sites must not each cost a pass over the file.
+                lower, rows = len(sort[0]), np.concatenate(sort)
+                sort = (np.arange(lower), np.arange(lower, len(rows)))
+            matrix = (
+                np.column_stack([a.covariates[name][rows] for name in covariates]) if covariates else None
+            )
             self._samples[key] = build_sample(
-                position=a.position,
-                outcome=a.outcomes[outcome],
-                above=a.above,
+                position=a.position[rows],
+                outcome=a.outcomes[outcome][rows],
+                above=a.above[rows],
                 treated=a.treated,
-                weight=a.weight,
-                take_up=a.take_up,
+                weight=None if a.weight is None else a.weight[rows],
+                take_up=None if a.take_up is None else a.take_up[rows],
                 covariates=matrix,
-                cluster=a.cluster,
+                cluster=None if a.cluster is None else a.cluster[rows],
+                row=rows if site is not None else None,
                 score_magnitude=self._score_magnitude,
-                sort=self._outward(site),
+                sort=sort,
             )
         return self._samples[key]
 

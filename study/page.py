@@ -9,6 +9,7 @@ import numpy as np
 from estimation.effect import Effect
 from study.analysis import Workbench
 from study.assemble import Assigned
+from study.border_result import border_sentences
 from study.comparison import Comparison
 from study.comparison_words import opening, sentences, site_texts
 from study.disagreement import remarks
@@ -56,7 +57,7 @@ def result_lines(
             lines.append("")
             lines += _picture(effect, bench, width, plain)
         lines.append("")
-        for sentence in (*remarks(effect), *_take_up(effect)):
+        for sentence in (*_along(effect, result), *remarks(effect), *_take_up(effect)):
             lines += item_lines(sentence, width)
         departs = () if result.record is None else result.record.departs(effect.outcome)
         if departs:
@@ -85,6 +86,18 @@ def result_lines(
         width,
     )
     return lines
+
+
+def _along(effect: Effect, result: Result) -> tuple[str, ...]:
+    """What the points along a border say, under the effect of the whole of it."""
+    if effect.kind != "boundary":
+        return ()
+    return tuple(
+        sentence
+        for found in result.along
+        if found.outcome == effect.outcome
+        for sentence in border_sentences(found, binary=effect.binary)
+    )
 
 
 def wrapped_lines(sentence: str, width: int) -> list[str]:

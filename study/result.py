@@ -13,6 +13,7 @@ from estimation.multiple import benjamini_hochberg, holm
 from estimation.randomisation import Randomisation
 from estimation.reading import Reading, TakeUp
 from study.assemble import Assigned
+from study.border_result import AlongBorder, border_document
 from study.comparison import Comparison
 from study.comparison_document import comparisons_document
 from study.document import Study
@@ -54,6 +55,7 @@ class Result:
     failures: tuple[OutcomeFailure, ...]
     families: tuple[Family, ...]
     comparisons: tuple[Comparison, ...] = ()
+    along: tuple[AlongBorder, ...] = ()
     record: Record | None = None
 
     def to_document(self) -> dict[str, Any]:
@@ -87,6 +89,7 @@ class Result:
             ],
             "comparison": comparisons_document(self.comparisons),
             **({} if self.comparisons else {"comparison_reason": "the study has one line"}),
+            **({"border": [border_document(found) for found in self.along]} if self.along else {}),
             "doubts": [],
             "doubts_reason": "this version does not yet ask the doubts",
             "guard": {

@@ -91,6 +91,15 @@ def test_clusters_are_added_up_before_they_are_squared() -> None:
     assert np.isfinite(effects(data, cluster=code).std_error).all()
 
 
+def test_few_clusters_on_a_side_are_no_basis_for_an_error() -> None:
+    data = square(2500, 4)
+    # Vertical strips a tenth wide: two or three of them reach into the kernel on the treated side.
+    strips = (data["places"][:, 0] * 10).astype(np.int64)
+    found = effects(data, cluster=strips)
+    assert not found.known.any()
+    assert set(found.reasons) == {"fewer than 6 clusters on a side within the width"}
+
+
 def test_the_band_is_wider_than_pointwise_and_narrower_than_bonferroni() -> None:
     found = effects(square(3000, 6))
     assert 1.96 < found.critical < stats.norm.ppf(1 - 0.025 / len(POINTS)) + 0.03

@@ -140,3 +140,34 @@ def test_a_missing_area_file_is_refused_in_words(tmp_path: Path) -> None:
     with pytest.raises(StudyError) as problem:
         Workbench.open(load_study(path))
     assert "zone.gpkg" in problem.value.what
+
+
+def test_effects_along_the_border_hold_what_was_built_in(bench: Workbench) -> None:
+    (found,) = bench.run().along
+    effects = found.effects
+    assert effects.known.sum() >= 10
+    assert found.by_length is not None
+    assert found.by_length.low < 2.0 < found.by_length.high
+    assert np.all((effects.band_low[effects.known] < 2.0) & (effects.band_high[effects.known] > 2.0))
+    # One point by hand: offsets from it by the geodesic's length and direction, both sides by least squares.
+    border = bench.assigned.border
+    assert border is not None
+    k = int(np.flatnonzero(effects.known)[0])
+    lon, lat = found.points.longitude[k], found.points.latitude[k]
+    ok = np.isfinite(border.longitude) & (bench.assigned.reason == 0)
+    azimuth, _, away = GEOD.inv(
+        np.full(ok.sum(), lon), np.full(ok.sum(), lat), border.longitude[ok], border.latitude[ok]
+    )
+    u = away / effects.bandwidth
+    design = np.column_stack(
+        (np.ones(len(u)), u * np.sin(np.radians(azimuth)), u * np.cos(np.radians(azimuth)))
+    )
+    levels = []
+    for side in (False, True):
+        rows = (u < 1) & (bench.assigned.above[ok] == side)
+        root = np.sqrt(1 - u[rows])
+        outcome = bench.outcome_values("sick")[ok][rows]
+        levels.append(np.linalg.lstsq(design[rows] * root[:, None], outcome * root, rcond=None)[0][0])
+    assert effects.estimate[k] == pytest.approx(levels[1] - levels[0], rel=1e-5)
+    document = bench.run().to_document()["border"][0]
+    assert document["points"][k]["estimate"] == effects.estimate[k]
