@@ -153,7 +153,7 @@ class SideOfSites:
         inside = (
             self.first_scores <= limit[:, None] if kernel == "uniform" else self.first_scores < limit[:, None]
         )
-        return inside.sum(axis=1).astype(np.int64)
+        return np.asarray(inside.sum(axis=1), dtype=np.int64)
 
     def raw(self, limit: Vector, kernel: str) -> Extended:
         """Σ over each site's rows inside its limit of (…)·(d / limit)^r, shape (S, powers, channels)."""

@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass, replace
 from functools import cached_property
+from itertools import pairwise
 from typing import TYPE_CHECKING, Final
 
 import numpy as np
@@ -452,7 +453,7 @@ class Workbench:
         rows = np.flatnonzero(self._used)
         order = rows[np.argsort(site[rows], kind="stable")]
         ends = np.searchsorted(site[order], np.arange(len(self.sites) + 1))
-        return [order[a:b] for a, b in zip(ends[:-1], ends[1:])]
+        return [order[a:b] for a, b in pairwise(ends)]
 
     def _rows(self, site: str | None) -> Codes:
         return np.concatenate(self._outward(site))
@@ -469,11 +470,13 @@ class Workbench:
         key = (outcome, site, covariates)
         if key not in self._samples:
             a = self.assigned
-            sort, rows = self._outward(site), slice(None)
+            sort = self._outward(site)
+            own: Codes | None = None
+            rows: Codes | slice = slice(None)
             if site is not None:
                 # Of a site only its own rows are touched: many sites must not each cost a pass over the file.
-                lower, rows = len(sort[0]), np.concatenate(sort)
-                sort = (np.arange(lower), np.arange(lower, len(rows)))
+                lower, rows = len(sort[0]), (own := np.concatenate(sort))
+                sort = (np.arange(lower), np.arange(lower, len(own)))
             matrix = (
                 np.column_stack([a.covariates[name][rows] for name in covariates]) if covariates else None
             )
@@ -486,7 +489,7 @@ class Workbench:
                 take_up=None if a.take_up is None else a.take_up[rows],
                 covariates=matrix,
                 cluster=None if a.cluster is None else a.cluster[rows],
-                row=rows if site is not None else None,
+                row=own,
                 score_magnitude=self._score_magnitude,
                 sort=sort,
             )

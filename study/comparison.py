@@ -12,19 +12,69 @@ from estimation.arrays import Codes, Vector
 from estimation.effect_slope import effect_slope
 from estimation.errors import CannotEstimate
 from estimation.inference import Interval
-from estimation.line import Line
 from estimation.line_fit import Bandwidths
 from estimation.line_shares import shares_at_line
 from estimation.randomisation import Randomisation
 from estimation.reading import Reading
 from estimation.shared_clusters import ClusterShares, shares_of_jump, shares_of_ratio
+from estimation.take_up import WEAK_F
 from study.between import Between, neighbouring_pairs
+from study.site_readings import readings_at_once
 from study.sites_together import Together, put_together
+
+# More sites than this and how each effect changes with its cutoff is asked one by one, not in every run.
+MOST_SLOPES = 100
 
 if TYPE_CHECKING:
     from study.analysis import Workbench
 
 Found = TypeVar("Found")
+
+
+@dataclass(frozen=True, slots=True, kw_only=True)
+class SiteReading:
+    """What the comparison needs of one site's estimate.
+
+    Attributes
+    ----------
+    estimate, std_error, robust
+        The effect, plain and bias-corrected; for a fuzzy study the ratio.
+    count_below, count_above, clusters
+        Rows inside the bandwidth, and clusters among them.
+    take_up_jump, first_stage_f, intention
+        Of a fuzzy study: the first stage, and the bias-corrected jump in the outcome itself; else None.
+    """
+
+    estimate: float
+    std_error: float
+    robust: Interval
+    count_below: int
+    count_above: int
+    clusters: int | None = None
+    take_up_jump: float | None = None
+    first_stage_f: float | None = None
+    intention: Interval | None = None
+
+    @classmethod
+    def of(cls, reading: Reading) -> SiteReading:
+        """The same of a full reading."""
+        take_up, intention = reading.take_up, reading.intention
+        return cls(
+            estimate=reading.estimate,
+            std_error=reading.std_error,
+            robust=reading.robust,
+            count_below=reading.count_below,
+            count_above=reading.count_above,
+            clusters=reading.clusters,
+            take_up_jump=None if take_up is None else take_up.jump,
+            first_stage_f=None if take_up is None else take_up.first_stage_f,
+            intention=None if intention is None else intention.robust,
+        )
+
+    @property
+    def weak(self) -> bool:
+        """Whether take-up jumps too little to divide by with confidence."""
+        return self.first_stage_f is not None and self.first_stage_f < WEAK_F
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -57,7 +107,7 @@ class SiteRow:
     below: int
     above: int
     bandwidths: Bandwidths | None = None
-    reading: Reading | None = None
+    reading: SiteReading | None = None
     reason: str | None = None
     remedy: str | None = None
     randomisation: Randomisation | None = None
@@ -155,9 +205,13 @@ def compare(
     """
     if not bench.sites:
         raise ValueError("one line has nothing to compare")
-    sites = []
-    for name in bench.sites:
-        if should_stop is not None and should_stop():
+    sites: list[_Site] = []
+    at_once = readings_at_once(bench, outcome, width)
+    for i, name in enumerate(bench.sites):
+        read = None if at_once is None else at_once[i]
+        if read is not None:
+            sites.append(_Site(_row(bench, outcome, name, *read, slope=width is None), None, None))
+        elif should_stop is not None and should_stop():
             row = _bare(
                 bench, outcome, name, "The comparison was stopped before this site.", "Start it again."
             )
@@ -209,7 +263,7 @@ def _site(bench: Workbench, outcome: str, name: str, width: float | None) -> _Si
     try:
         line = bench.line(outcome, name)
         widths = bench.chosen(outcome, name) if width is None else line.at(width)
-        reading = bench.reading(outcome, widths, name)
+        reading = SiteReading.of(bench.reading(outcome, widths, name))
         if not reading.robust.std_error > 0.0 or not np.isfinite(reading.robust.estimate):
             raise CannotEstimate(
                 "Inside its bandwidth the outcome does not vary, so that its effect has no known spread.",
@@ -217,16 +271,7 @@ def _site(bench: Workbench, outcome: str, name: str, width: float | None) -> _Si
             )
     except CannotEstimate as problem:
         return _Site(_bare(bench, outcome, name, problem.sentence, problem.remedy), None, None)
-    below, above = bench.rows_with(outcome, name)
-    row = SiteRow(
-        name=name,
-        cutoff=bench.cutoff(name),
-        below=below,
-        above=above,
-        bandwidths=widths,
-        reading=reading,
-        slope=_slope(line, widths) if width is None else None,
-    )
+    row = _row(bench, outcome, name, widths, reading, slope=width is None)
     adjust = line.choices.adjust and line.with_covariates is not None
     changes = line.cluster_changes(widths, adjust=adjust)
     if changes is None:
@@ -235,9 +280,24 @@ def _site(bench: Workbench, outcome: str, name: str, width: float | None) -> _Si
     return _Site(row, ratio, shares_of_jump(changes))
 
 
-def _slope(line: Line, widths: Bandwidths) -> Interval | None:
+def _row(
+    bench: Workbench, outcome: str, name: str, widths: Bandwidths, reading: SiteReading, *, slope: bool
+) -> SiteRow:
+    below, above = bench.rows_with(outcome, name)
+    return SiteRow(
+        name=name,
+        cutoff=bench.cutoff(name),
+        below=below,
+        above=above,
+        bandwidths=widths,
+        reading=reading,
+        slope=_slope(bench, outcome, name, widths) if slope and len(bench.sites) <= MOST_SLOPES else None,
+    )
+
+
+def _slope(bench: Workbench, outcome: str, name: str, widths: Bandwidths) -> Interval | None:
     try:
-        return effect_slope(line, widths)
+        return effect_slope(bench.line(outcome, name), widths)
     except CannotEstimate:
         return None
 
@@ -276,10 +336,10 @@ def _weighed(rows: list[SiteRow], shares: Vector | None) -> tuple[SiteRow, ...]:
     if shares is None:
         return tuple(rows)
     jumps = [
-        1.0 if row.reading is None or row.reading.take_up is None else row.reading.take_up.jump
+        1.0 if row.reading is None or row.reading.take_up_jump is None else row.reading.take_up_jump
         for row in rows
     ]
-    fuzzy = any(row.reading is not None and row.reading.take_up is not None for row in rows)
+    fuzzy = any(row.reading is not None and row.reading.take_up_jump is not None for row in rows)
     # A site without an estimate of its own has an unknown jump in take-up; so have the weights of a ratio then.
     known = not fuzzy or all(row.reading is not None for row in rows)
     weights = shares * np.array(jumps)

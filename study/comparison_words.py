@@ -281,7 +281,7 @@ def _unestimated(comparison: Comparison, row: SiteRow) -> str:
 
 def _weak(comparison: Comparison) -> list[str]:
     readings = [(clean(row.name), row.reading) for row in comparison.rows if row.reading is not None]
-    weak = [name for name, reading in readings if reading.take_up is not None and reading.take_up.weak]
+    weak = [name for name, reading in readings if reading.weak]
     few = [
         name for name, reading in readings if reading.clusters is not None and reading.clusters < FEW_CLUSTERS
     ]

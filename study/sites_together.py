@@ -26,13 +26,12 @@ from estimation.pooling import (
     trend_in,
     weighted_mean,
 )
-from estimation.reading import Reading
 from estimation.shared_clusters import ClusterShares, joint_covariance
 from estimation.simultaneous import Band, JointTest, joint_test, simultaneous_band
 
 if TYPE_CHECKING:
     from study.analysis import Workbench
-    from study.comparison import SiteRow
+    from study.comparison import SiteReading, SiteRow
 
 Found = TypeVar("Found")
 
@@ -80,8 +79,8 @@ class Together:
         return self.names.index(name) if name in self.names else None
 
 
-def _robust(reading: Reading, sharp: bool) -> Interval:
-    return reading.intention.robust if sharp and reading.intention is not None else reading.robust
+def _robust(reading: SiteReading, sharp: bool) -> Interval:
+    return reading.intention if sharp and reading.intention is not None else reading.robust
 
 
 def put_together(

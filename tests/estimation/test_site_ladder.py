@@ -8,6 +8,7 @@ from estimation.errors import CannotEstimate
 from estimation.line import Line
 from estimation.line_fit import Bandwidths
 from estimation.sample import Sample, build_sample
+from estimation.site_bandwidths import choose_site_widths, score_spreads
 from estimation.site_ladder import SiteLadder
 
 SIZES = (900, 60, 0, 300, 9, 130, 2000, 70)
@@ -117,3 +118,41 @@ def test_a_site_that_cannot_be_fitted_is_unknown_and_spoils_no_other() -> None:
             assert np.isfinite(fits.robust_jump[s, 0])
     assert fits.count_above[3] == 0 and fits.count_below[3] > 0
     assert (fits.distinct_below[1], fits.distinct_below[2]) == (2, 0)
+
+
+@pytest.mark.parametrize("kernel", ["triangular", "uniform", "epanechnikov"])
+@pytest.mark.parametrize("rule", ["mse", "coverage", "mse per side", 1.5, (1.2, 2.0)])
+@pytest.mark.parametrize(
+    ("order", "treated", "fuzzy"), [(1, "above", False), (1, "below", True), (2, "above", False)]
+)
+def test_every_site_chooses_its_own_width(
+    kernel: str, rule: str | float | tuple[float, float], order: int, treated: str, fuzzy: bool
+) -> None:
+    data = draw(7, fuzzy=fuzzy, lumpy=fuzzy, weighted=not fuzzy)
+    choices = Choices(kernel=kernel, order=order, bandwidth=rule)
+    ladder = ladder_of(data, kernel, order, treated)
+    rows, spread = np.zeros(len(SIZES), dtype=np.int64), np.ones(len(SIZES))
+    lines = {}
+    for s, size in enumerate(SIZES):
+        if size < 50:
+            continue
+        lines[s] = Line.prepare(sample_of(data, s, treated), choices)
+        rows[s], spread[s] = lines[s].spread.rows, lines[s].spread.width
+    own_rows, own_spread = score_spreads(ladder)
+    for s in lines:
+        assert (own_rows[s], own_spread[s]) == (rows[s], pytest.approx(spread[s], rel=1e-12))
+    found = choose_site_widths(ladder, rows, spread, choices)
+    assert found is not None
+    for s, line in lines.items():
+        single = line.bandwidths()
+        assert found.below[s] == pytest.approx(single.below, rel=1e-7)
+        assert found.above[s] == pytest.approx(single.above, rel=1e-7)
+    if isinstance(rule, str):
+        assert np.isnan(found.below[2])
+
+
+def test_rules_that_need_each_line_are_left_to_it() -> None:
+    data = draw(1)
+    ladder = ladder_of(data, "triangular", 1, "above")
+    for choices in (Choices(bandwidth="bias-aware"), Choices(pilot="mse")):
+        assert choose_site_widths(ladder, np.ones(8, dtype=np.int64), np.ones(8), choices) is None
