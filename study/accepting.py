@@ -48,6 +48,8 @@ def accept(option: Option, value: object) -> object:
             return _number(option, value)
         case "word":
             return _word(option, value)
+        case "word or file":
+            return value if isinstance(value, str) and _is_profile_file(value) else _word(option, value)
         case "word or number":
             return _word(option, value) if isinstance(value, str) else _number(option, value)
         case "word, number or pair":
@@ -92,6 +94,10 @@ def _text(value: object) -> str:
     if "\0" in value:
         raise Refused("text with a null character")
     return value
+
+
+def _is_profile_file(value: str) -> bool:
+    return value.endswith(".toml") and "\0" not in value
 
 
 def _word(option: Option, value: object) -> str:

@@ -24,6 +24,7 @@ Kind = Literal[
     "number list",
     "number table",
     "whole number or text",
+    "word or file",
 ]
 
 RULES: Final = ("cutoff", "cutoffs", "steps", "boundary", "frontier")
@@ -89,6 +90,7 @@ class Option:
             "number list": "a list of ascending numbers, such as [30.0, 50.0]",
             "number table": "a table of names and numbers, such as { Alder = 52.0 }",
             "whole number or text": f"{number}, or the name of a column in quotes",
+            "word or file": f'{words}, or a file of your own such as "ours.toml"',
         }[self.kind]
 
     def _range(self) -> str:
@@ -346,10 +348,10 @@ OPTIONS: Final[tuple[Option, ...]] = (
     Option(
         section="guard",
         key="profile",
-        kind="word",
+        kind="word or file",
         allowed=PROFILES,
         default=PROFILES[0],
-        help="The disclosure rules in force.",
+        help="The disclosure rules in force: by name, or a file of your own beside the study.",
     ),
 )
 BY_NAME: Final[Mapping[str, Option]] = {option.name: option for option in OPTIONS}

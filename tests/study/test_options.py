@@ -21,6 +21,7 @@ WRONG: dict[str, tuple[object, ...]] = {
     "whole number": ("1", 1.5, True, [], {}, -1, math.nan, math.inf, 10**400),
     "number": ("1", True, [], {}, math.nan, math.inf, -math.inf, 10**400),
     "word": ("nonsense", "", 1, True, [], {}),
+    "word or file": ("nonsense", "", "ours.json", True, [], {}, 1, None),
     "word or number": ("nonsense", "", True, [], {}, math.nan, math.inf, 0, -1.0),
     "word, number or pair": (
         "nonsense",
