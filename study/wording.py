@@ -161,6 +161,11 @@ def effect_headline(effect: Effect) -> str:
 
 def effect_sentence(effect: Effect, study: Study) -> str:
     """The effect in full: the number, its interval, the levels, the bandwidth and the counts."""
+    return f"{finding_sentence(effect, study)} {_basis(effect)}"
+
+
+def finding_sentence(effect: Effect, study: Study) -> str:
+    """The number, its interval and the levels, without what they rest on."""
     reading, outcome = effect.reading, clean(effect.outcome)
     scale, unit = (100.0, " percentage points") if effect.binary else (1.0, "")
     spread = scale * (reading.robust.std_error if effect.lead == "robust" else reading.std_error)
@@ -173,8 +178,7 @@ def effect_sentence(effect: Effect, study: Study) -> str:
         start = f"{where}, the programme changes {outcome} by {said}{unit} for those whom the line moved to take it"
     else:
         start = f"{where}, {outcome} differs by {said}{unit} on the treated side"
-    levels = _levels(effect, scale)
-    return f"{start} ({bracket}; {finding}){levels}. {_basis(effect)}"
+    return f"{start} ({bracket}; {finding}){_levels(effect, scale)}."
 
 
 def _where(effect: Effect, study: Study) -> str:
@@ -217,16 +221,28 @@ def _levels(effect: Effect, scale: float) -> str:
 
 
 def _basis(effect: Effect) -> str:
-    reading, widths = effect.reading, effect.bandwidths
+    reading = effect.reading
+    low, high = side_words(effect)
+    rows = f"{plural(reading.count_below, 'row')} {low} and {reading.count_above:,} {high}"
+    clusters = "" if reading.clusters is None else f" in {plural(reading.clusters, 'cluster')}"
+    return f"It rests on {rows}{clusters} {near_words(effect)}."
+
+
+def side_words(effect: Effect) -> tuple[str, str]:
+    """What the two sides are called."""
     border = effect.kind in ("boundary", "segment")
-    low, high = ("on the other side", "on the treated side") if border else ("below", "above")
-    unit, line = (" m", "border") if border else ("", "line")
+    return ("on the other side", "on the treated side") if border else ("below", "above")
+
+
+def near_words(effect: Effect) -> str:
+    """How near to the line the rows lie, and which rule chose it."""
+    widths = effect.bandwidths
+    low, high = side_words(effect)
+    unit, line = (" m", "border") if effect.kind in ("boundary", "segment") else ("", "line")
     if widths.below == widths.above:
         near = f"within {width_text(widths.below)}{unit} of the {line}"
     else:
         near = f"within {width_text(widths.below)}{unit} {low} and {width_text(widths.above)}{unit} {high}"
-    rows = f"{plural(reading.count_below, 'row')} {low} and {reading.count_above:,} {high}"
-    clusters = "" if reading.clusters is None else f" in {plural(reading.clusters, 'cluster')}"
     rule = {
         "mse": "the MSE-optimal width",
         "coverage": "the coverage-optimal width",
@@ -234,7 +250,7 @@ def _basis(effect: Effect) -> str:
         "mse per side": "MSE-optimal widths by side",
         "coverage per side": "coverage-optimal widths by side",
     }.get(widths.rule, "a chosen width")
-    return f"It rests on {rows}{clusters} {near} ({rule})."
+    return f"{near} ({rule})"
 
 
 def pieces_text(pieces: Pieces, scale: float, spread: float) -> str:
