@@ -293,6 +293,8 @@ def leave_one_out(sites: SiteEstimates, *, level: float) -> tuple[Without, ...]:
         With fewer than three sites.
     """
     require_sites(sites, 3, "Leaving one site out")
+    if sites.covariance is None:
+        return _leave_one_out_of_independent(sites, level)
     found = []
     everyone = np.arange(len(sites))
     for i in range(len(sites)):
@@ -306,6 +308,28 @@ def leave_one_out(sites: SiteEstimates, *, level: float) -> tuple[Without, ...]:
             )
         )
     return tuple(found)
+
+
+def _leave_one_out_of_independent(sites: SiteEstimates, level: float) -> tuple[Without, ...]:
+    """The same for all sites at once: every sum without a site is the whole less the site's own term."""
+    weight, y = 1.0 / sites.variance, sites.estimate - float(np.mean(sites.estimate))
+    rest, squares = weight.sum() - weight, np.sum(weight**2) - weight**2
+    centre = (weight @ y - weight * y) / rest
+    q = (weight @ y**2 - weight * y**2) - rest * centre**2
+    tau2 = np.maximum(0.0, (q - (len(sites) - 2)) / (rest - squares / rest))
+    # Row i holds the weights of the random-effects mean without site i.
+    mixed = 1.0 / (sites.variance + tau2[:, None])
+    np.fill_diagonal(mixed, 0.0)
+    total = mixed.sum(axis=1)
+    shift = float(np.mean(sites.estimate))
+
+    def found(centre: float, error: float) -> Interval:
+        return interval(float(centre + shift), float(error), level=level, degrees=sites.degrees)
+
+    return tuple(
+        Without(fixed=found(a, b**-0.5), random=found(c, d**-0.5), tau2=float(t))
+        for a, b, c, d, t in zip(centre, rest, mixed @ y / total, total, tau2)
+    )
 
 
 def trend_in(cutoff: Vector, sites: SiteEstimates, *, level: float) -> Trend:

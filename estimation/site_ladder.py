@@ -304,6 +304,23 @@ class SiteLadder:
             distinct_above=self.above.distinct(above, self.kernel),
         )
 
+    def shares_at_line(self, below: float, above: float) -> Vector:
+        """Each site's share of the units at the line in a fit pooled over sites at these widths, shape (S,).
+
+        The mean of both sides' local fits of "is of this site" (see `estimation.line_shares`), from the sums.
+        NaN where a pooled side can't carry the fit.
+        """
+        shape, size = kernel_coefficients(self.kernel), self.order + 1
+        sides = []
+        for side, width in ((self.below, below), (self.above, above)):
+            limit = np.full(len(side.starts) - 1, width)
+            moments = combine(side.raw(limit, self.kernel), shape, 2 * size - 1)[:, :, 0]
+            unit = np.zeros((1, size, 1), dtype=np.longdouble)
+            unit[:, 0] = 1.0
+            weights = solve(hankel(moments.sum(axis=0)[None], size), unit)[0, :, 0]
+            sides.append((moments[:, :size] @ weights).astype(np.float64))
+        return np.asarray(0.5 * (sides[0] + sides[1]))
+
 
 @dataclass(frozen=True, slots=True)
 class _SideFits:

@@ -104,6 +104,7 @@ class Workbench:
         )
         self._lines: dict[_Need, Line] = {} if kept is None else kept._lines
         self._chosen: dict[tuple[str, str | None], Bandwidths] = {}
+        self._counts: dict[str, tuple[Codes, ...]] = {}
         self._at_once: dict[tuple[str, str, int, float], SitesAtOnce] = {} if kept is None else kept._at_once
         self._randomised: dict[tuple[object, ...], Randomisation | str] = (
             {} if kept is None else kept._randomised
@@ -330,9 +331,18 @@ class Workbench:
 
     def rows_with(self, outcome: str, site: str | None = None) -> tuple[int, int]:
         """Assigned rows with the outcome known, below and above."""
-        column = self.assigned.outcomes[outcome]
-        lower, upper = self._outward(site)
-        return int(np.sum(~np.isnan(column[lower]))), int(np.sum(~np.isnan(column[upper])))
+        if site is None or self.assigned.site is None:
+            known = self._used & ~np.isnan(self.assigned.outcomes[outcome])
+            return int(np.sum(known & ~self.assigned.above)), int(np.sum(known & self.assigned.above))
+        if outcome not in self._counts:
+            a = self.assigned
+            known = self._used & ~np.isnan(a.outcomes[outcome]) & (self.assigned.site >= 0)
+            self._counts[outcome] = tuple(
+                np.bincount(self.assigned.site[known & side], minlength=len(self.sites))
+                for side in (~a.above, a.above)
+            )
+        place, counts = self._place_of[site], self._counts[outcome]
+        return int(counts[0][place]), int(counts[1][place])
 
     def against_rule(self, site: str | None = None) -> AgainstRule | None:
         """Take-up against the rule, by side, among all assigned rows; None without a take-up column."""

@@ -315,6 +315,9 @@ def _pooled(
 
 def _shares(bench: Workbench, outcome: str, widths: Bandwidths) -> Vector:
     """Each site's share of the units at the line, the mean of what the two sides say, shape (sites,)."""
+    at_once = bench.sites_at_once(outcome)
+    if at_once is not None:
+        return at_once.ladder.shares_at_line(widths.below, widths.above)
     line, codes = bench.line(outcome), bench.assigned.site
     assert codes is not None  # there are sites
     sides = [

@@ -7,6 +7,7 @@ from estimation.choices import Choices
 from estimation.errors import CannotEstimate
 from estimation.line import Line
 from estimation.line_fit import Bandwidths
+from estimation.line_shares import shares_at_line
 from estimation.sample import Sample, build_sample
 from estimation.site_bandwidths import choose_site_widths, score_spreads
 from estimation.site_ladder import SiteLadder
@@ -149,6 +150,27 @@ def test_every_site_chooses_its_own_width(
         assert found.above[s] == pytest.approx(single.above, rel=1e-7)
     if isinstance(rule, str):
         assert np.isnan(found.below[2])
+
+
+@pytest.mark.parametrize("order", [1, 2])
+def test_shares_at_the_line_are_those_of_the_rows(order: int) -> None:
+    data = draw(8, weighted=True)
+    found = ladder_of(data, "triangular", order, "above").shares_at_line(1.5, 1.8)
+    sample = build_sample(
+        position=data["position"],
+        outcome=data["outcome"],
+        above=data["above"],
+        treated="above",
+        weight=data["weight"],
+    )
+    slow = [
+        shares_at_line(
+            side, data["site"][side.row], len(SIZES), bandwidth=width, kernel="triangular", order=order
+        )
+        for (_, side), width in zip(sample.sides, (1.5, 1.8))
+    ]
+    assert found == pytest.approx(np.mean(slow, axis=0), rel=1e-9, abs=1e-12)
+    assert found.sum() == pytest.approx(1.0, rel=1e-12)
 
 
 def test_rules_that_need_each_line_are_left_to_it() -> None:
