@@ -399,10 +399,10 @@ def _integral(side: SideSums, kernel: str, bandwidth: float, polynomial: Extende
     V(t) = ∫_t^∞ W = Σ_{d > t} l (d − t)²/2 is a combination of sums, so each stretch of one sign costs two
     queries. All crossings are bisected together; V is flat there, so their last digits hardly matter.
     """
-    whole = side.raw(np.array([bandwidth]), np.array([bandwidth]), kernel)[0, :, 0]
+    whole = side.raw(np.array([bandwidth]), np.array([bandwidth]), kernel, weights_only=True)[0, :, 0]
 
     def tails(u: Vector) -> tuple[Vector, Vector]:
-        near = side.raw(u * bandwidth, np.full(len(u), bandwidth), "uniform")[:, :, 0]
+        near = side.raw(u * bandwidth, np.full(len(u), bandwidth), "uniform", weights_only=True)[:, :, 0]
         beyond = np.where(u[:, None] > 0.0, whole - near, whole)
         s0, s1, s2 = (beyond[:, r : r + len(polynomial)] @ polynomial for r in range(3))
         v = u.astype(np.longdouble)

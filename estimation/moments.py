@@ -173,23 +173,26 @@ class Rungs:
             extended=extended,
         )
 
-    def sums(self, counts: Codes) -> Extended:
-        """Σ over the `counts[i]` nearest rows, shape (len(counts), powers, channels)."""
+    def sums(self, counts: Codes, *, weights_only: bool = False) -> Extended:
+        """Σ over the `counts[i]` nearest rows, shape (len(counts), powers, channels), or of Σ w alone (…, 1)."""
         block = counts // BLOCK
-        total = self.running[block]
+        total = self.running[block, :, :1] if weights_only else self.running[block]
         for start in range(0, len(counts), STRETCH):
             some = slice(start, start + STRETCH)
-            total[some] += self._between(block[some] * BLOCK, counts[some])
+            total[some] += self._between(block[some] * BLOCK, counts[some], weights_only)
         return total
 
-    def _between(self, first: Codes, stop: Codes) -> npt.NDArray[Any]:
+    def _between(self, first: Codes, stop: Codes, weights_only: bool) -> npt.NDArray[Any]:
         """Σ over rows first[i] … stop[i] − 1, fewer than a block each."""
         width = int(np.max(stop - first, initial=0))
         index = first[:, None] + np.arange(width)
         inside = index < stop[:, None]
         rows = np.minimum(index, len(self.side) - 1).ravel()
         weight = None if self.side.weight is None else self.side.weight[rows]
-        columns = self.channels.columns(self.side.values[rows] - self.centre, self.residual[rows], weight)
+        if weights_only:
+            columns = np.ones((len(rows), 1)) if weight is None else weight[:, None]
+        else:
+            columns = self.channels.columns(self.side.values[rows] - self.centre, self.residual[rows], weight)
         columns[~inside.ravel()] = 0.0
         kind = np.longdouble if self.extended else np.float64
         powered = powers_of((self.side.distance[rows] / self.reach).astype(kind), self.running.shape[1])
@@ -259,11 +262,11 @@ class SideSums:
         edge: Any = "right" if kernel == "uniform" else "left"
         return np.searchsorted(self.first_scores, limit, side=edge).astype(np.int64)
 
-    def raw(self, limit: Vector, scale: Vector, kernel: str) -> Extended:
-        """Σ over rows inside `limit` of (…)·(d / scale)^r, shape (H, powers, channels)."""
+    def raw(self, limit: Vector, scale: Vector, kernel: str, *, weights_only: bool = False) -> Extended:
+        """Σ over rows inside `limit` of (…)·(d / scale)^r, shape (H, powers, channels), or of w alone (…, 1)."""
         total: Extended | None = None
         for part in self.parts:
-            sums = part.sums(_counts(part, limit, kernel))
+            sums = part.sums(_counts(part, limit, kernel), weights_only=weights_only)
             ratio = np.longdouble(part.reach) / scale.astype(np.longdouble)
             sums *= powers_of(ratio, sums.shape[1])[:, :, None]
             total = sums if total is None else total + sums

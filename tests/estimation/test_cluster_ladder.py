@@ -112,13 +112,8 @@ def test_kept_distances_change_nothing() -> None:
     sample = sample_of(data)
     kept = ClusterLadder.build(sample, kernel="triangular", order=1)
     assert len(kept.sides[0].edges) > 2
-    bare = replace(
-        kept,
-        sides=tuple(
-            replace(side, edges=side.edges[:1], kept_mass=side.kept_mass[:1], kept_first=side.kept_first[:1])
-            for side in kept.sides
-        ),  # type: ignore[arg-type]
-    )
+    below, above = (replace(side, edges=side.edges[:1], kept=side.kept[:1]) for side in kept.sides)
+    bare = replace(kept, sides=(below, above))
     for width in (0.05, 0.4, 1.2):
         widths = Bandwidths.common(width)
         one, other = (ladder.spread(widths, order=1, variance="neighbour") for ladder in (kept, bare))
