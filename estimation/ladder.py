@@ -13,10 +13,12 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from estimation.adjustment import common_coefficients
-from estimation.arrays import Codes, Cube, Matrix, Vector
+from estimation.arrays import Codes, Cube, Mask, Matrix, Vector
 from estimation.errors import CannotEstimate
 from estimation.kernels import COEFFICIENTS
 from estimation.line_fit import Bandwidths, LineFit, too_few
+from estimation.line_fits import LineFits as LineFits
+from estimation.line_fits import Widths as Widths
 from estimation.moments import (
     Extended,
     Rungs,
@@ -31,82 +33,6 @@ from estimation.moments import (
 from estimation.sample import Sample, Side, SideName
 from estimation.squares import FITTED, SideSquares, Spread, Weights, degrees_factor
 from estimation.variance import neighbour_residuals
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class Widths:
-    """Bandwidths to ask about, each shape (H,), in units of the score."""
-
-    below: Vector
-    above: Vector
-    pilot_below: Vector
-    pilot_above: Vector
-
-    @classmethod
-    def single(cls, bandwidths: Bandwidths) -> Widths:
-        """One query."""
-        b = bandwidths
-        return cls(
-            below=np.array([b.below]),
-            above=np.array([b.above]),
-            pilot_below=np.array([b.pilot_below]),
-            pilot_above=np.array([b.pilot_above]),
-        )
-
-    def of(self, side: SideName) -> tuple[Vector, Vector]:
-        """(bandwidth, pilot bandwidth) of one side."""
-        return (self.below, self.pilot_below) if side == "below" else (self.above, self.pilot_above)
-
-    def part(self, some: slice) -> Widths:
-        """Some of the queries."""
-        return Widths(
-            below=self.below[some],
-            above=self.above[some],
-            pilot_below=self.pilot_below[some],
-            pilot_above=self.pilot_above[some],
-        )
-
-    @classmethod
-    def common(cls, bandwidth: Vector, pilot: float | None = None) -> Widths:
-        """The same on both sides; the pilot follows the bandwidth unless it is given."""
-        h = np.asarray(bandwidth, dtype=np.float64)
-        b = h if pilot is None else np.full(len(h), float(pilot))
-        return cls(below=h, above=h, pilot_below=b, pilot_above=b)
-
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class LineFits:
-    """A `LineFit` for each query: the same quantities with a leading axis H, NaN where a fit can't run."""
-
-    levels_below: Matrix
-    levels_above: Matrix
-    jump: Matrix
-    covariance: Cube
-    robust_jump: Matrix
-    robust_covariance: Cube
-    unit_bias: Vector
-    adjustment: Cube
-    count_below: Codes
-    count_above: Codes
-    effective: Vector
-    clusters: Codes | None = None
-
-    def at(self, i: int) -> LineFit:
-        """One of them."""
-        return LineFit(
-            levels_below=self.levels_below[i],
-            levels_above=self.levels_above[i],
-            jump=self.jump[i],
-            covariance=self.covariance[i],
-            robust_jump=self.robust_jump[i],
-            robust_covariance=self.robust_covariance[i],
-            unit_bias=float(self.unit_bias[i]),
-            adjustment=self.adjustment[i],
-            count_below=int(self.count_below[i]),
-            count_above=int(self.count_above[i]),
-            effective=float(self.effective[i]),
-            clusters=None if self.clusters is None else int(self.clusters[i]),
-        )
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -237,12 +163,31 @@ class Ladder:
             )
         return fit
 
+    def enough(self, widths: Widths, *, order: int) -> Mask:
+        """Where both sides hold the distinct scores that `fit` asks for, shape (H,)."""
+        found = np.ones(len(widths.below), dtype=bool)
+        for side in (self.below, self.above):
+            for width, p in zip(widths.of(side.name), (order, order + 1)):
+                found &= side.distinct(width, self.kernel) >= p + 2
+        return found
+
     def fits(
-        self, widths: Widths, *, order: int | None = None, adjust: bool = False, variance: str = "neighbour"
+        self,
+        widths: Widths,
+        *,
+        order: int | None = None,
+        adjust: bool = False,
+        variance: str = "neighbour",
+        unit_bias: bool = True,
     ) -> LineFits:
         """The fit at each pair of widths, NaN where it can't run.
 
-        `variance` is "neighbour", or "hc0" or "hc1" on a ladder `with_squares`.
+        Parameters
+        ----------
+        variance
+            "neighbour", or "hc0" or "hc1" on a ladder `with_squares`.
+        unit_bias
+            Whether the worst bias is wanted; from order 2 on it costs more than all the rest, and is NaN if not.
         """
         order = self.order if order is None else order
         if variance in FITTED and self.squares is None:
@@ -261,6 +206,9 @@ class Ladder:
         )
         sign = self.treated_sign
         queries = len(widths.below)
+        bias = np.full(queries, 0.0 if unit_bias else np.nan)
+        for side, fit in ((self.below, low), (self.above, high)) if unit_bias else ():
+            bias += _unit_bias(side, self.kernel, widths.of(side.name)[0], fit.level_weights, fit.moments)
         return LineFits(
             levels_below=low.level,
             levels_above=high.level,
@@ -268,7 +216,7 @@ class Ladder:
             covariance=low.covariance + high.covariance,
             robust_jump=sign * (high.robust_level - low.robust_level),
             robust_covariance=low.robust_covariance + high.robust_covariance,
-            unit_bias=low.unit_bias + high.unit_bias,
+            unit_bias=bias,
             adjustment=(
                 common_coefficients(low.partial_products + high.partial_products, targets=self.targets)
                 if adjust
@@ -286,7 +234,8 @@ class _SideFits:
     robust_level: Matrix
     covariance: Cube
     robust_covariance: Cube
-    unit_bias: Vector
+    level_weights: Extended
+    moments: Extended
     count: Codes
     effective: Vector
     partial_products: Cube
@@ -353,7 +302,8 @@ def _side_fits(
         robust_level=(level - shift + side.centre).astype(np.float64),
         covariance=plain.astype(np.float64),
         robust_covariance=robust.astype(np.float64),
-        unit_bias=_unit_bias(side, kernel, bandwidth, level_weights, moments),
+        level_weights=level_weights,
+        moments=moments,
         count=count,
         effective=(moments[:, 0, 0] ** 2 / np.where(squared > 0.0, squared, np.nan)).astype(np.float64),
         partial_products=products.astype(np.float64),

@@ -3,36 +3,30 @@
 from __future__ import annotations
 
 from collections.abc import Callable
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, field, replace
 
 import numpy as np
 
 from estimation.adjustment import adjusted
-from estimation.arrays import Codes, Vector
+from estimation.arrays import Codes, Matrix, Vector
 from estimation.bandwidth import ScoreSpread, choose_bandwidths, rule_of_thumb_curvature
 from estimation.choices import Choices
 from estimation.cluster_ladder import ClusterChanges, ClusterLadder
 from estimation.errors import CannotEstimate
-from estimation.inference import critical_values, quantile
-from estimation.ladder import Ladder, LineFits, Widths
+from estimation.inference import quantile
+from estimation.ladder import Ladder, Widths
 from estimation.line_fit import Bandwidths, LineFit
 from estimation.local_polynomial import fit_rows
 from estimation.moments import SideSums, combine, hankel, kernel_coefficients, solve
 from estimation.reading import Reading, read_fit
 from estimation.sample import Sample, SideName
+from estimation.squares import FITTED
+from estimation.sweep import Sweep as Sweep
+from estimation.sweep import interval_rows
+from estimation.sweep import leading_interval as leading_interval
 
-
-@dataclass(frozen=True, slots=True, kw_only=True)
-class Sweep:
-    """The effect at each of H common bandwidths, NaN where it can't be estimated, each shape (H,)."""
-
-    bandwidth: Vector
-    estimate: Vector
-    std_error: Vector
-    low: Vector
-    high: Vector
-    count_below: Codes
-    count_above: Codes
+# Widths that a clustered sweep answers between two looks at whether to stop.
+_AT_ONCE = 10
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -92,6 +86,9 @@ class Line:
         Sums by cluster of either sample; None without clusters.
     cap
         Largest width (below, above), where rows further out belong to another line: half-way to the next step.
+    squared
+        Ladders `with_squares`, by whether they hold covariates: made when "hc0" or "hc1" is first asked for, and
+        shared by every copy of the line.
     """
 
     sample: Sample
@@ -104,6 +101,7 @@ class Line:
     clusters: ClusterLadder | None = None
     covariate_clusters: ClusterLadder | None = None
     cap: tuple[float, float] = (np.inf, np.inf)
+    squared: dict[bool, Ladder] = field(default_factory=dict, repr=False, compare=False)
 
     @classmethod
     def prepare(cls, sample: Sample, choices: Choices, with_covariates: Sample | None = None) -> Line:
@@ -119,7 +117,7 @@ class Line:
         kept = sample.without_donut(choices.donut)
         ladder = Ladder.build(kept, kernel=choices.kernel, order=choices.order)
         full = None if with_covariates is None else with_covariates.without_donut(choices.donut)
-        return cls(
+        line = cls(
             sample=kept,
             ladder=ladder,
             choices=choices,
@@ -134,13 +132,42 @@ class Line:
             clusters=_by_cluster(kept, choices),
             covariate_clusters=None if full is None else _by_cluster(full, choices),
         )
+        return line._ready()
 
     def choosing(self, choices: Choices) -> Line:
         """The same line under other choices; sums are kept unless the choices need other ones."""
         old = self.choices
         if (choices.kernel, choices.donut) != (old.kernel, old.donut) or choices.order > self.ladder.order:
             raise ValueError("these choices need the rows summed again")
-        return replace(self, choices=choices, curvature=_curvature(self.ladder, choices))
+        return replace(self, choices=choices, curvature=_curvature(self.ladder, choices))._ready()
+
+    def _ready(self) -> Line:
+        """Itself, with what its variance needs summed, so that the first reading is as quick as the others."""
+        if self.on_ladder:
+            self._sums(adjust=False)
+            if self.with_covariates is not None:
+                self._sums(adjust=True)
+        return self
+
+    def _sums(self, *, adjust: bool) -> Ladder:
+        """The ladder that answers for the choices' variance, without or with covariates."""
+        sample, ladder = (
+            (self.with_covariates, self.covariate_ladder) if adjust else (self.sample, self.ladder)
+        )
+        if sample is None or ladder is None:
+            raise CannotEstimate(
+                "There is no covariate to adjust for.", "Name covariates in the study first."
+            )
+        if self.clusters is not None or self.choices.variance not in FITTED:
+            return ladder
+        if adjust not in self.squared:
+            self.squared[adjust] = ladder.with_squares(sample)
+        return self.squared[adjust]
+
+    @property
+    def _row_variance(self) -> str:
+        """What a ladder is asked for: clusters put their own variance in its place."""
+        return "neighbour" if self.clusters is not None else self.choices.variance
 
     @property
     def fuzzy(self) -> bool:
@@ -150,7 +177,7 @@ class Line:
     @property
     def on_ladder(self) -> bool:
         """Whether readings come from running sums, at once for any number of rows."""
-        return self.choices.variance == "neighbour" or self.clusters is not None
+        return self.choices.variance in ("neighbour", *FITTED) or self.clusters is not None
 
     def bandwidths(self) -> Bandwidths:
         """What the choices ask for; covariates never move it."""
@@ -182,28 +209,29 @@ class Line:
         fit = self._raw_fit(bandwidths, adjust=adjust)
         return adjusted(fit, 1 + int(self.fuzzy)) if adjust else fit
 
-    def _raw_fit(self, bandwidths: Bandwidths, *, adjust: bool) -> LineFit:
-        sample, ladder, clusters = self.sample, self.ladder, self.clusters
-        if adjust:
-            if self.with_covariates is None or self.covariate_ladder is None:
-                raise CannotEstimate(
-                    "There is no covariate to adjust for.", "Name covariates in the study first."
-                )
-            sample, ladder, clusters = self.with_covariates, self.covariate_ladder, self.covariate_clusters
+    def _raw_fit(self, bandwidths: Bandwidths, *, adjust: bool, covariates: bool | None = None) -> LineFit:
+        """The fit with covariates among its variables where `covariates` (as `adjust` unless given)."""
+        wide = adjust if covariates is None else covariates
+        order, variance = self.choices.order, self.choices.variance
         if self.on_ladder:
-            fit = ladder.fit(bandwidths, order=self.choices.order, adjust=adjust)
-            if clusters is not None:
-                fit = self._clustered(fit, clusters, bandwidths)
-        else:
-            fit = fit_rows(
-                sample,
-                bandwidths,
-                kernel=self.choices.kernel,
-                order=self.choices.order,
-                variance=self.choices.variance,
-                adjust=adjust,
+            fit = self._sums(adjust=wide).fit(
+                bandwidths, order=order, adjust=adjust, variance=self._row_variance
             )
-        return fit
+            clusters = self.covariate_clusters if wide else self.clusters
+            return fit if clusters is None else self._clustered(fit, clusters, bandwidths)
+        sample = self.with_covariates if wide else self.sample
+        if sample is None:
+            raise CannotEstimate(
+                "There is no covariate to adjust for.", "Name covariates in the study first."
+            )
+        return fit_rows(
+            sample,
+            bandwidths,
+            kernel=self.choices.kernel,
+            order=order,
+            variance=variance,
+            adjust=adjust,
+        )
 
     def _clustered(self, fit: LineFit, clusters: ClusterLadder, bandwidths: Bandwidths) -> LineFit:
         spread = clusters.spread(bandwidths, order=self.choices.order, variance=self.choices.variance)
@@ -235,18 +263,7 @@ class Line:
         if self.with_covariates is None or self.covariate_ladder is None:
             return np.zeros(0), np.zeros(0)
         first = 1 + int(self.fuzzy)
-        if self.on_ladder:
-            fit = self.covariate_ladder.fit(bandwidths, order=self.choices.order)
-            if self.covariate_clusters is not None:
-                fit = self._clustered(fit, self.covariate_clusters, bandwidths)
-        else:
-            fit = fit_rows(
-                self.with_covariates,
-                bandwidths,
-                kernel=self.choices.kernel,
-                order=self.choices.order,
-                variance=self.choices.variance,
-            )
+        fit = self._raw_fit(bandwidths, adjust=False, covariates=True)
         error = np.sqrt(np.maximum(np.diagonal(fit.robust_covariance)[first:], 0.0))
         return fit.robust_jump[first:], error
 
@@ -266,16 +283,8 @@ class Line:
         should_stop
             Asked between widths where each costs a pass over rows; the rest stay NaN once it answers True.
         """
-        if self.on_ladder and self.clusters is None and not self.fuzzy and not self.choices.adjust:
-            asked = Widths.common(bandwidth, self._fixed_pilot())
-            widths = Widths(
-                below=np.minimum(asked.below, self.cap[0]),
-                above=np.minimum(asked.above, self.cap[1]),
-                pilot_below=np.minimum(asked.pilot_below, self.cap[0]),
-                pilot_above=np.minimum(asked.pilot_above, self.cap[1]),
-            )
-            fits = self.ladder.fits(widths, order=self.choices.order)
-            return self._sweep_from(bandwidth, fits)
+        if self.on_ladder:
+            return self._sweep_of_sums(bandwidth, should_stop)
         rows = np.full((4, len(bandwidth)), np.nan)
         counts = np.zeros((2, len(bandwidth)), dtype=np.int64)
         for i, width in enumerate(bandwidth):
@@ -288,38 +297,48 @@ class Line:
             low, high = leading_interval(reading, self.choices.interval)
             rows[:, i] = (reading.estimate, reading.std_error, low, high)
             counts[:, i] = (reading.count_below, reading.count_above)
-        return Sweep(
-            bandwidth=bandwidth,
-            estimate=rows[0],
-            std_error=rows[1],
-            low=rows[2],
-            high=rows[3],
-            count_below=counts[0],
-            count_above=counts[1],
-        )
+        return Sweep.of(bandwidth, rows, counts)
 
-    def _sweep_from(self, bandwidth: Vector, fits: LineFits) -> Sweep:
-        level, which = self.choices.level, self.choices.interval
-        error = np.sqrt(np.maximum(fits.covariance[:, 0, 0], 0.0))
-        centre = fits.jump[:, 0]
-        if which == "robust":
-            centre = fits.robust_jump[:, 0]
-            reach = quantile(level) * np.sqrt(np.maximum(fits.robust_covariance[:, 0, 0], 0.0))
-        elif which == "plain":
-            reach = quantile(level) * error
-        else:
-            safe = np.where(error > 0.0, error, np.nan)
-            bias = np.where(np.isfinite(fits.unit_bias), fits.unit_bias * self.curvature[0], np.nan)
-            reach = critical_values(bias / safe, level) * error
-        return Sweep(
-            bandwidth=bandwidth,
-            estimate=fits.jump[:, 0],
-            std_error=error,
-            low=centre - reach,
-            high=centre + reach,
-            count_below=fits.count_below,
-            count_above=fits.count_above,
+    def _sweep_of_sums(self, bandwidth: Vector, should_stop: Callable[[], bool] | None) -> Sweep:
+        """A sweep off the ladder: all widths together where nothing else costs, else some at a time."""
+        asked = Widths.common(bandwidth, self._fixed_pilot())
+        widths = Widths(
+            below=np.minimum(asked.below, self.cap[0]),
+            above=np.minimum(asked.above, self.cap[1]),
+            pilot_below=np.minimum(asked.pilot_below, self.cap[0]),
+            pilot_above=np.minimum(asked.pilot_above, self.cap[1]),
         )
+        slow = self.clusters is not None or (self.fuzzy and self.choices.interval == "bias-aware")
+        together = _AT_ONCE if slow else max(len(bandwidth), 1)
+        rows = np.full((4, len(bandwidth)), np.nan)
+        counts = np.zeros((2, len(bandwidth)), dtype=np.int64)
+        for start in range(0, len(bandwidth), together):
+            if should_stop is not None and should_stop():
+                break
+            some = slice(start, start + together)
+            rows[:, some], counts[:, some] = self._answers(widths.part(some))
+        return Sweep.of(bandwidth, rows, counts)
+
+    def _answers(self, widths: Widths) -> tuple[Matrix, Codes]:
+        """(estimate, error, low, high), shape (4, H), and rows of each side, shape (2, H); NaN where no fit runs."""
+        adjust, order = self.choices.adjust, self.choices.order
+        ladder = self._sums(adjust=adjust)
+        bias = self.choices.interval == "bias-aware"
+        fits = ladder.fits(widths, order=order, adjust=adjust, variance=self._row_variance, unit_bias=bias)
+        clusters = self.covariate_clusters if adjust else self.clusters
+        if clusters is not None:
+            fits = clusters.clustered(fits, widths, order=order, variance=self.choices.variance)
+        if adjust:
+            fits = fits.adjusted(ladder.targets)
+        rows = interval_rows(
+            fits,
+            which=self.choices.interval,
+            level=self.choices.level,
+            curvature=self.curvature,
+            fuzzy=self.fuzzy,
+            enough=ladder.enough(widths, order=order),
+        )
+        return rows, np.stack((fits.count_below, fits.count_above))
 
     def curve(self, bandwidths: Bandwidths, points: int = 60) -> Curve:
         """Both local fits from the line to the edge of the bandwidth, with pointwise plain intervals."""
@@ -357,15 +376,6 @@ class Line:
     def binary(self) -> bool:
         """Whether the outcome is nought or one in every row."""
         return all(bool(np.isin(side.outcome, (0.0, 1.0)).all()) for _, side in self.sample.sides)
-
-
-def leading_interval(reading: Reading, which: str) -> tuple[float, float]:
-    """(low, high) of the chosen interval; NaN where it can't be had."""
-    if which == "bias-aware":
-        honest = reading.bias_aware
-        return (float("nan"), float("nan")) if honest is None else (honest.low, honest.high)
-    found = reading.robust if which == "robust" else reading.plain
-    return (found.low, found.high)
 
 
 def _curve_of(side: SideSums, width: float, kernel: str, order: int, u: Vector) -> tuple[Vector, Vector]:
