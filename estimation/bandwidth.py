@@ -149,11 +149,13 @@ def _limits(ladder: Ladder, order: int, kernel: str) -> _Limits:
                 f"and an order {order} estimate with its bias correction needs {needed}.",
                 "Check the cutoff and the rows the study reads, or use local randomisation.",
             )
-        # A kernel that ends at zero does not count a row on its edge: go to the next score.
-        inside = needed - 1 if kernel == "uniform" else min(needed, len(scores) - 1)
+        # A kernel that ends at zero does not count a row on its edge: go to the next score, or past the last by a gap.
+        edge = float(scores[needed - 1])
+        if kernel != "uniform":
+            edge = float(scores[needed] if len(scores) > needed else 2.0 * scores[-1] - scores[-2])
         nearest = np.sort(np.concatenate([part.side.distance[:FEWEST_ROWS] for part in side.parts]))
         tenth = nearest[min(FEWEST_ROWS, len(nearest)) - 1]
-        low.append(max(float(scores[inside]), float(tenth)))
+        low.append(max(edge, float(tenth)))
     return _Limits(low=np.array(low), high=np.array([ladder.below.reach, ladder.above.reach]))
 
 

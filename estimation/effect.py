@@ -233,7 +233,11 @@ def estimate_effect(line: Line, bandwidths: Bandwidths, question: Question) -> E
         curvature_table=_curvature_table(sharp, line),
         breakdown=(
             breakdown_curvature(
-                sharp.estimate, sharp.std_error, unit_bias=sharp.unit_bias, level=line.choices.level
+                sharp.estimate,
+                sharp.std_error,
+                unit_bias=sharp.unit_bias,
+                level=line.choices.level,
+                degrees=_degrees(sharp),
             )
             if np.isfinite(sharp.unit_bias)
             else None
@@ -293,6 +297,10 @@ def _slopes(line: Line, bandwidths: Bandwidths) -> tuple[float, float] | None:
     return float(below.value[0]), float(above.value[0])
 
 
+def _degrees(reading: Reading) -> float | None:
+    return None if reading.clusters is None else float(max(reading.clusters - 1, 1))
+
+
 def _curvature_table(sharp: Reading, line: Line) -> tuple[CurvatureRow, ...]:
     """Of the jump in the outcome itself; empty for order 0, where no curvature bounds the bias."""
     if not np.isfinite(sharp.unit_bias):
@@ -307,6 +315,7 @@ def _curvature_table(sharp: Reading, line: Line) -> tuple[CurvatureRow, ...]:
                 unit_bias=sharp.unit_bias,
                 curvature=multiple * bound,
                 level=line.choices.level,
+                degrees=_degrees(sharp),
             ),
         )
         for multiple in (0.5, 1.0, 2.0)

@@ -104,8 +104,19 @@ def critical_values(bias_ratio: Vector | float, level: float) -> Any:
     return c if np.ndim(bias_ratio) else float(c)
 
 
+def widened(level: float, degrees: float | None) -> float:
+    """How much longer Student's t makes an interval than the normal law does, at least 1."""
+    return 1.0 if degrees is None else quantile(level, degrees) / quantile(level)
+
+
 def honest_interval(
-    estimate: float, std_error: float, *, unit_bias: float, curvature: float, level: float
+    estimate: float,
+    std_error: float,
+    *,
+    unit_bias: float,
+    curvature: float,
+    level: float,
+    degrees: float | None = None,
 ) -> HonestInterval:
     """Estimate ± cv(max_bias / std_error)·std_error.
 
@@ -113,9 +124,14 @@ def honest_interval(
     ----------
     unit_bias
         Worst bias for each unit of `curvature` (`estimation.worst_bias`).
+    degrees
+        Of freedom of the error, where it comes from few clusters: the critical value grows by the ratio of t to the
+        normal quantile, so that without any bias this is the t interval.
     """
     bias = unit_bias * curvature
-    critical = float(critical_values(bias / std_error, level)) if std_error > 0.0 else float("nan")
+    critical = float("nan")
+    if std_error > 0.0:
+        critical = float(critical_values(bias / std_error, level)) * widened(level, degrees)
     reach = critical * std_error if std_error > 0.0 else bias
     return HonestInterval(
         curvature=curvature,
@@ -127,7 +143,13 @@ def honest_interval(
 
 
 def breakdown_curvature(
-    estimate: float, std_error: float, *, unit_bias: float, level: float, largest: float = 1e12
+    estimate: float,
+    std_error: float,
+    *,
+    unit_bias: float,
+    level: float,
+    degrees: float | None = None,
+    largest: float = 1e12,
 ) -> float:
     """The smallest bound M at which the honest interval holds zero; 0 where it always does.
 
@@ -136,7 +158,7 @@ def breakdown_curvature(
 
     def holds_zero(curvature: float) -> bool:
         found = honest_interval(
-            abs(estimate), std_error, unit_bias=unit_bias, curvature=curvature, level=level
+            abs(estimate), std_error, unit_bias=unit_bias, curvature=curvature, level=level, degrees=degrees
         )
         return found.low <= 0.0
 

@@ -34,7 +34,8 @@ class TakeUp:
     weak
         Whether F is under 16: then the Anderson–Rubin set leads.
     anderson_rubin, honest_anderson_rubin
-        Sets of ratios as pieces (low, high), plain and with both regressions allowed to bend.
+        Sets of ratios as pieces (low, high): from the bias-corrected jumps, and from the plain ones with both regressions
+        allowed to bend.
     levels_below, levels_above
         Fitted take-up at the line.
     """
@@ -109,7 +110,9 @@ def read_fit(fit: LineFit, *, level: float, curvature: Vector, fuzzy: bool) -> R
 def _read_jump(fit: LineFit, *, level: float, curvature: float, degrees: float | None) -> Reading:
     estimate, error = float(fit.jump[0]), _error(fit.covariance)
     honest = (
-        honest_interval(estimate, error, unit_bias=fit.unit_bias, curvature=curvature, level=level)
+        honest_interval(
+            estimate, error, unit_bias=fit.unit_bias, curvature=curvature, level=level, degrees=degrees
+        )
         if np.isfinite(fit.unit_bias)
         else None
     )
@@ -140,7 +143,7 @@ def _read_ratio(
     """The ratio; its bias-corrected form is the ratio of the bias-corrected jumps (at b = h an order p + 1 fit)."""
     plain = ratio_of_jumps(fit.jump, fit.covariance)
     robust = ratio_of_jumps(fit.robust_jump, fit.robust_covariance)
-    honest, reason = _honest_ratio(fit, plain, level=level, curvature=curvature)
+    honest, reason = _honest_ratio(fit, plain, level=level, curvature=curvature, degrees=degrees)
     first = interval(float(fit.jump[1]), _error(fit.covariance, 1), level=level, degrees=degrees)
     strength = (first.estimate / first.std_error) ** 2 if first.std_error > 0.0 else float("inf")
     take_up = TakeUp(
@@ -176,14 +179,14 @@ def _read_ratio(
 
 
 def _honest_ratio(
-    fit: LineFit, plain: Ratio, *, level: float, curvature: Vector
+    fit: LineFit, plain: Ratio, *, level: float, curvature: Vector, degrees: float | None
 ) -> tuple[tuple[HonestInterval | None, Pieces | None], str | None]:
     """The bias-aware Anderson–Rubin set, and as an interval where it is one."""
     if not np.isfinite(fit.unit_bias):
         return (None, None), "means are biased by the slope, which no bound on the curvature bounds"
     bounds = (float(curvature[0]), float(curvature[1]))
     pieces = honest_anderson_rubin(
-        fit.jump, fit.covariance, unit_bias=fit.unit_bias, curvature=bounds, level=level
+        fit.jump, fit.covariance, unit_bias=fit.unit_bias, curvature=bounds, level=level, degrees=degrees
     )
     if len(pieces) != 1 or not np.all(np.isfinite(pieces[0])):
         return (None, pieces), "take-up jumps too little to bound the ratio on both sides"

@@ -24,7 +24,7 @@ from typing import Final
 import numpy as np
 
 from estimation.arrays import Mask, Matrix, Vector
-from estimation.inference import critical_values, quantile
+from estimation.inference import critical_values, quantile, widened
 
 # First-stage F below which the ratio's own interval does not lead (methods note, common practice of the trade).
 WEAK_F: Final = 16.0
@@ -92,12 +92,15 @@ def honest_anderson_rubin(
     unit_bias: float,
     curvature: tuple[float, float],
     level: float,
+    degrees: float | None = None,
 ) -> Pieces:
     """The same set when each regression may bend: r stays while |j_y − r j_t| ≤ cv(bias(r)/se(r))·se(r).
 
     bias(r) = (M_y + |r| M_t)·unit_bias. On the compactified line r = tan(θ) the acceptance margin is
     continuous, with a kink at r = 0; each sign change on a fine grid of angles is bisected.
     """
+
+    longer = widened(level, degrees)
 
     def margin(angle: Vector) -> Vector:
         # Multiplied through by cos θ > 0: works at r = ±∞ too.
@@ -107,7 +110,7 @@ def honest_anderson_rubin(
         error = np.sqrt(np.maximum(variance, 0.0))
         bias = (c * curvature[0] + np.abs(s) * curvature[1]) * unit_bias
         safe = np.where(error > 0.0, error, 1.0)
-        reach = np.where(error > 0.0, critical_values(bias / safe, level) * safe, bias)
+        reach = np.where(error > 0.0, longer * critical_values(bias / safe, level) * safe, bias)
         return np.asarray(reach - gap)
 
     half = 0.5 * np.pi
