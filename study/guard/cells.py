@@ -11,15 +11,16 @@ estimates that differ by a few rows give those rows away.
 
 from __future__ import annotations
 
-from collections.abc import Iterator, Sequence
+from collections.abc import Sequence
 from typing import Final
 
 import numpy as np
 
 from estimation.arrays import Codes, Mask, Matrix
 
-_SEARCH: Final = 20_000  # unions looked at before a set is refused for want of certainty
+_MOST: Final = 16  # dimensions tried in full; beyond it a set is refused for want of certainty
 _ROUNDING: Final = 1e-7
+_NEAR: Final = 1e-5
 
 
 def admit(
@@ -79,38 +80,39 @@ def exposes(incidence: Matrix, sizes: Codes, threshold: int) -> bool:
 
     Notes
     -----
-    With N a basis of the null space of the incidence matrix, a vector x over atoms is a combination of its rows if and
-    only if x N = 0. A group under the threshold is made of small atoms only, so that the question is whether some of
-    the small atoms' rows of N add up to nought. It is undecided where there are too many to try: then the answer is yes.
+    A group under the threshold is made of small atoms only. The combinations c of sets that leave out every large atom
+    solve c A_large = 0; what they make of the small atoms, c A_small, is a space of some dimension d. In reduced form
+    each of its 0/1 vectors is known by its d leading entries: all 2^d are tried. With a d too large to try, the answer
+    is yes.
     """
     incidence, sizes = _coarse(incidence, sizes)
-    small = np.flatnonzero(sizes < threshold)
-    if not len(small):
+    small = sizes < threshold
+    if not small.any():
         return False
-    null = _null_space(incidence)
-    rows = null[small]
-    if not rows.shape[1]:
-        return True  # every atom can be worked out
-    scale = np.linalg.svd(rows, compute_uv=False)
-    if int(np.sum(scale > _ROUNDING)) == len(small):
+    space = _span(_left_null(incidence[:, ~small]) @ incidence[:, small])
+    if not len(space):
         return False  # no combination of small atoms alone
-    for tried, total in enumerate(_sums(rows, sizes[small], threshold)):
-        if tried >= _SEARCH or float(np.max(np.abs(total))) < _ROUNDING:
-            return True
-    return False
+    if len(space) > _MOST:
+        return True
+    basis = _reduced(space)
+    leading = (np.arange(1, 2 ** len(basis))[:, None] >> np.arange(len(basis))) & 1
+    groups = leading @ basis
+    whole = np.all(np.abs(groups - np.round(groups)) < _NEAR, axis=1)
+    groups = np.round(groups)
+    whole &= np.all((groups == 0.0) | (groups == 1.0), axis=1)
+    return bool(np.any(groups[whole] @ sizes[small] < threshold))
 
 
-def _sums(rows: Matrix, sizes: Codes, threshold: int) -> Iterator[Matrix]:
-    """Sums over every union of rows whose sizes stay under the threshold."""
-    stack = [(-1, 0, np.zeros(rows.shape[1]))]
-    while stack:
-        last, size, total = stack.pop()
-        for i in range(last + 1, len(rows)):
-            grown = size + int(sizes[i])
-            if grown < threshold:
-                added = total + rows[i]
-                yield added
-                stack.append((i, grown, added))
+def _reduced(space: Matrix) -> Matrix:
+    """Reduced row echelon form of independent rows, the largest entry leading."""
+    basis = space.copy()
+    for i in range(len(basis)):
+        j = int(np.argmax(np.abs(basis[i])))
+        basis[i] /= basis[i, j]
+        for other in range(len(basis)):
+            if other != i:
+                basis[other] -= basis[other, j] * basis[i]
+    return basis
 
 
 def _atoms(sets: Sequence[Mask]) -> tuple[Matrix, Codes]:
@@ -131,9 +133,19 @@ def _coarse(incidence: Matrix, sizes: Codes) -> tuple[Matrix, Codes]:
     return columns[:, held], merged[held]
 
 
-def _null_space(incidence: Matrix) -> Matrix:
-    """Orthonormal basis of the null space, shape (atoms, dimension)."""
-    _, scale, right = np.linalg.svd(incidence, full_matrices=True)
-    rank = int(np.sum(scale > _ROUNDING * max(incidence.shape)))
-    found: Matrix = right[rank:].T
+def _left_null(matrix: Matrix) -> Matrix:
+    """Orthonormal rows c with c @ matrix = 0."""
+    if not matrix.shape[1]:
+        return np.eye(len(matrix))
+    left, scale, _ = np.linalg.svd(matrix, full_matrices=True)
+    found: Matrix = left[:, int(np.sum(scale > _ROUNDING * max(matrix.shape))) :].T
+    return found
+
+
+def _span(rows: Matrix) -> Matrix:
+    """Orthonormal rows that span the same space."""
+    if not rows.size:
+        return rows[:0]
+    _, scale, right = np.linalg.svd(rows, full_matrices=False)
+    found: Matrix = right[: int(np.sum(scale > _ROUNDING * max(rows.shape)))]
     return found

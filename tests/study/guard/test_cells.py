@@ -128,5 +128,5 @@ def test_what_can_not_be_decided_is_refused(monkeypatch: pytest.MonkeyPatch) -> 
     # Atoms of 6, 7 and 100 rows; what is shown is the first two together, and the first with the third.
     incidence, sizes = np.array([[1.0, 1.0, 0.0], [1.0, 0.0, 1.0]]), np.array([6, 7, 100])
     assert not exposes(incidence, sizes, 10)
-    monkeypatch.setattr("study.guard.cells._SEARCH", 0)
+    monkeypatch.setattr("study.guard.cells._MOST", 0)
     assert exposes(incidence, sizes, 10)

@@ -1,0 +1,1 @@
+"""What leaves: tables, figures, a report and the record, each after the guard."""
