@@ -56,10 +56,11 @@ def scale_of(comparison: Comparison) -> float:
 
 def site_texts(comparison: Comparison, by: str = "name") -> tuple[SiteText, ...]:
     """Every site as text, sorted as asked (see `study.comparison.order_of`)."""
-    return tuple(_site_text(comparison, comparison.rows[i]) for i in order_of(comparison, by))
+    return tuple(site_text(comparison, comparison.rows[i]) for i in order_of(comparison, by))
 
 
-def _site_text(comparison: Comparison, row: SiteRow) -> SiteText:
+def site_text(comparison: Comparison, row: SiteRow) -> SiteText:
+    """One site as text."""
     scale, together = scale_of(comparison), comparison.together
     share = "–" if row.share is None else f"{100 * row.share:.1f}{TIE}%".replace("-", MINUS)
     i = together.place(row.name)
@@ -103,6 +104,38 @@ def _site_text(comparison: Comparison, row: SiteRow) -> SiteText:
         numbers=(scale * robust.estimate, scale * robust.low, scale * robust.high),
         drawn=drawn,
         reason=None,
+    )
+
+
+def headline(comparison: Comparison) -> str:
+    """The sites in one short sentence: their pooled effect and whether they differ."""
+    scale, unit = scale_of(comparison), " points" if comparison.binary else ""
+    pooled, spread = comparison.pooled, comparison.together.spread
+    said = f"{clean(comparison.outcome)} over all {comparison.kind}s: "
+    if pooled is None:
+        said += "no pooled effect"
+    else:
+        robust = pooled.robust
+        wide = scale * robust.std_error
+        said += (
+            f"{figure(scale * robust.estimate, wide, sign=True)}{unit} ({figure(scale * robust.low, wide)} to "
+            f"{figure(scale * robust.high, wide)})"
+        )
+    if spread is not None:
+        differ = "they differ" if spread.p_value < 1.0 - comparison.level else "no difference shows"
+        said += f"; {differ} ({p_text(spread.p_value)}, I² {100 * spread.i2:.0f}{TIE}%)"
+    return said
+
+
+def site_sentence(comparison: Comparison, row: SiteRow) -> str:
+    """One site in a sentence: its effect with its intervals, or why it has none."""
+    text = site_text(comparison, row)
+    if text.reason is not None:
+        return _unestimated(comparison, row)
+    return (
+        f"{text.name} at {text.cutoff}: {text.estimate} ({text.low} to {text.high}), with all {comparison.kind}s at once "
+        f"{text.band_low} to {text.band_high}; drawn toward the mean {text.shrunken or 'no answer'}. {text.rows} rows within "
+        f"{text.width}; {text.share} of the units at the line."
     )
 
 

@@ -29,7 +29,8 @@ from tui.look import THEME_NAMES, Look, detect_look
 from tui.memory import remember_study
 from tui.opening import bare_folder, desk_for, first_place
 from tui.screens.assignment import AssignmentScreen
-from tui.screens.awaiting import CompareScreen, DoubtsScreen, ReleaseScreen
+from tui.screens.awaiting import DoubtsScreen, ReleaseScreen
+from tui.screens.compare import CompareScreen
 from tui.screens.data import DataScreen
 from tui.screens.effect import EffectScreen
 from tui.screens.room import Room
@@ -255,6 +256,13 @@ class CutbankApp(EverywhereApp):
     def _keep_view(self) -> None:
         if self.desk is not None:
             self.desk.keep_view()
+
+    def see_site(self, site: str, outcome: str, width: float | None) -> None:
+        """Open one site on the Effect screen, at the width that all sites stood at (None for its own)."""
+        self.action_stand("effect")
+        room = self._rooms.get("effect")
+        if isinstance(room, EffectScreen):
+            room.look_at(outcome, site=site, width=width)
 
     # ---- the data ---------------------------------------------------------------------------------------------
 

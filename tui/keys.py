@@ -151,6 +151,7 @@ _EFFECT: Final[tuple[Key, ...]] = (
     _key("effect.width", "w", "w", "type a width", "Type the bandwidth.", footer=False),
     _key("effect.choices", "f", "f", "choices", "Every choice of the estimate in one form."),
     _key("effect.outcome", "o", "o", "outcome", "See the next outcome."),
+    _key("effect.site", "s", "s", "site", "See the next site by itself; after the last one, all of them together.", footer=False),
     _key("effect.kernel", "k", "k", "kernel", "Take the next kernel.", edits=True),
     _key("effect.order", "p", "p", "order", "Take the next order of the local polynomial.", edits=True),
     _key("effect.interval", "i", "i", "interval", "Let the next interval lead: robust, bias-aware or plain.", edits=True),
@@ -192,6 +193,20 @@ _EFFECT_CONCEPTS: Final = (
         said="Leaves out the units nearest to the line, who had most reason and chance to place themselves across it.",
     ),
 )
+
+_COMPARE: Final[tuple[Key, ...]] = (
+    _key("compare.narrower", "left", "←", "narrower", "Make the common bandwidth of all sites a little narrower.", footer=False),
+    _key("compare.wider", "right", "→", "common width", "Make the common bandwidth of all sites a little wider.", pair="←→"),
+    _key("compare.much_narrower", "n", "n", "much narrower", "Make the common bandwidth much narrower.", footer=False),
+    _key("compare.much_wider", "m", "m", "by much", "Make the common bandwidth much wider.", pair="nm"),
+    _key("compare.own", "escape", "Esc", "own widths", "Let each site stand at its own bandwidth again."),
+    _key("compare.width", "w", "w", "type a width", "Type one bandwidth for all sites.", footer=False),
+    _key("compare.open", "enter", "Enter", "open", "Open the site under the cursor on the Effect screen."),
+    _key("compare.sort", "s", "s", "sort", "Sort by name, by cutoff, by effect or by rows."),
+    _key("compare.outcome", "o", "o", "outcome", "Compare the sites in the next outcome."),
+    _key("compare.said", "d", "d", "together", "All that the sites say together, in sentences."),
+    _key("compare.numbers", "t", "t", "table", "The numbers behind the picture as a table."),
+)  # fmt: skip
 
 PLACES: Final[tuple[Place, ...]] = (
     Place(
@@ -239,8 +254,28 @@ PLACES: Final[tuple[Place, ...]] = (
         name="compare",
         digit="4",
         title="Compare",
-        about="Effects beside each other.",
-        awaits="Compare will set the effects of several cutoffs, or of stretches of a boundary, beside each other.",
+        about="Effects of several sites, steps or stretches beside each other, and what they say together.",
+        keys=_COMPARE,
+        concepts=(
+            Concept(
+                word="site",
+                said="A place, year or round with a cutoff of its own. Each has its own effect, its own interval and its own rows.",
+            ),
+            Concept(
+                word="pooled",
+                said="All sites together, each unit measured from its own cutoff. It weighs the sites by how many units "
+                "stand at their lines: that is each site's share.",
+            ),
+            Concept(
+                word="drawn toward the mean",
+                said="A site's effect moved toward the mean of all, the further the less it knows by itself. It is the better "
+                "guess for one site; the interval of the site alone stays the honest test.",
+            ),
+            Concept(
+                word="all at once",
+                said="With many sites some interval misses by chance. This wider band holds at every site together.",
+            ),
+        ),
     ),
     Place(
         name="doubts",

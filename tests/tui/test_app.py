@@ -72,6 +72,8 @@ async def test_the_header_says_which_study_and_where_we_are(tmp_path: Path) -> N
         assert "▸3 Effect" in second and " 1 Data" in second
         await press(pilot, "4")
         assert "▸4 Compare" in shown(pilot)
+        assert "The study has one line: there is nothing to compare." in shown(pilot)
+        await press(pilot, "5")
         assert "This version does not have it yet." in " ".join(shown(pilot).split())
 
 

@@ -32,13 +32,6 @@ class _Awaiting(Room):
         return f"{self.about.awaits} This version does not have it yet."
 
 
-class CompareScreen(_Awaiting):
-    """Effects of several lines beside each other."""
-
-    place = "compare"
-    BINDINGS: ClassVar[list[BindingType]] = [*bindings_of("compare")]
-
-
 class DoubtsScreen(_Awaiting):
     """Falsification questions."""
 

@@ -120,31 +120,38 @@ class EffectScreen(EffectKeys):
         if message.study.estimate.bandwidth != message.before.estimate.bandwidth:
             self._stand_at(None)
 
-    def look_at(self, outcome: str) -> None:
-        """Look at another outcome: its line is prepared, then shown."""
+    def look_at(self, outcome: str, *, site: str | None = None, width: float | None = None) -> None:
+        """Look at another outcome, of one site or (None) of all: its line is prepared, then shown."""
         desk = self.bench.desk
         assert desk is not None
         desk.view = replace(desk.view, outcome=outcome)
         self.bench.view_moved()
+        self.site = site
         if self.bench.workbench is not None:
-            self._ask_for_line(self.bench.workbench)
+            self._ask_for_line(self.bench.workbench, width)
 
-    def _ask_for_line(self, workbench: Workbench) -> None:
+    def _ask_for_line(self, workbench: Workbench, width: float | None = None) -> None:
         from tui.screens.effect_work import Asked
 
         desk = self.bench.desk
         if desk is None or not self.outcome:
             return
-        self.width = desk.view.widths.get(self.outcome)
+        if self.site not in workbench.sites:
+            self.site = None
+        # Widths are remembered of the pooled line; a site is entered at its own or at the one given.
+        self.width = desk.view.widths.get(self.outcome) if self.site is None and width is None else width
         self._asked_of = workbench
         self._effect.forget()
         self._sweeping.forget()
-        self._prepare.supersede(Asked(workbench=workbench, outcome=self.outcome, width=self.width))
+        self._prepare.supersede(
+            Asked(workbench=workbench, outcome=self.outcome, width=self.width, site=self.site)
+        )
         self._refresh_words()
 
     def _show_prepared(self, asked: Asked, prepared: Prepared) -> None:
         self._problem = ""
-        same = self.prepared is not None and self.prepared.outcome == prepared.outcome
+        before = self.prepared
+        same = before is not None and (before.outcome, before.site) == (prepared.outcome, prepared.site)
         self.prepared = prepared
         self.reach = self.reach if same else None
         self.standing = Standing(
@@ -307,13 +314,15 @@ class EffectScreen(EffectKeys):
         self._read_now(prepared)
         from tui.screens.effect_work import Asked
 
-        self._effect.ask(Asked(workbench=prepared.workbench, outcome=prepared.outcome, width=width))
+        self._effect.ask(
+            Asked(workbench=prepared.workbench, outcome=prepared.outcome, width=width, site=prepared.site)
+        )
         self.refresh_keys()
 
     def _stand_at(self, width: float | None) -> None:
         self.width = width
         desk = self.bench.desk
-        if desk is not None and self.outcome:
+        if desk is not None and self.outcome and self.site is None:
             desk.view = desk.view.at_width(self.outcome, width)
 
     def _read_now(self, prepared: Prepared) -> None:
@@ -341,7 +350,12 @@ class EffectScreen(EffectKeys):
 
     def _show_found(self, asked: Asked, found: Found) -> None:
         prepared = self.prepared
-        if prepared is None or asked.workbench is not prepared.workbench or asked.width != self.width:
+        if (
+            prepared is None
+            or asked.workbench is not prepared.workbench
+            or asked.width != self.width
+            or asked.site != prepared.site
+        ):
             return  # an answer to an older question; the newer one is on its way
         own = max(prepared.own.below, prepared.own.above)
         self.standing = Standing(effect=found.effect, own=asked.width is None, own_width=own, pending=False)

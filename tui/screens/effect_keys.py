@@ -27,6 +27,8 @@ class EffectKeys(Room):
         Its effect against the width, once that is there.
     width
         Where the person stands; None at the study's own width.
+    site
+        The site that is looked at; None for all of them, or where the study has one line.
     reach
         How far from the line the picture goes.
     seen
@@ -40,6 +42,7 @@ class EffectKeys(Room):
     prepared: Prepared | None = None
     swept: Sweep | None = None
     width: float | None = None
+    site: str | None = None
     reach: float | None = None
     seen: list[Found]
     standing: Standing | None = None
@@ -55,8 +58,8 @@ class EffectKeys(Room):
         """Stand at a width, None for the study's own."""
         raise NotImplementedError
 
-    def look_at(self, outcome: str) -> None:
-        """Look at another outcome."""
+    def look_at(self, outcome: str, *, site: str | None = None, width: float | None = None) -> None:
+        """Look at another outcome, or another site."""
         raise NotImplementedError
 
     def _walk(self, steps: int) -> None:
@@ -76,6 +79,9 @@ class EffectKeys(Room):
             return ""
         if action == "covariates":
             return "" if desk.study.columns.covariates else "This study names no covariates"
+        if action == "site":
+            workbench = self.bench.workbench
+            return "" if workbench is not None and workbench.sites else "This study has one line"
         if action == "outcome":
             return "" if len(desk.study.columns.outcomes) > 1 else "This study has one outcome"
         if self.prepared is None:
@@ -115,7 +121,9 @@ class EffectKeys(Room):
             return
         from tui.screens.effect_work import Asked
 
-        self.best_slot.ask(Asked(workbench=prepared.workbench, outcome=prepared.outcome, width=None))
+        self.best_slot.ask(
+            Asked(workbench=prepared.workbench, outcome=prepared.outcome, width=None, site=prepared.site)
+        )
 
     def show_best(self, asked: Asked, width: float) -> None:
         """The MSE rule has answered."""
@@ -157,7 +165,15 @@ class EffectKeys(Room):
         desk = self.bench.desk
         assert desk is not None
         names = desk.study.columns.outcomes
-        self.look_at(names[(names.index(self.outcome) + 1) % len(names)])
+        self.look_at(names[(names.index(self.outcome) + 1) % len(names)], site=self.site)
+
+    def do_site(self) -> None:
+        """Key s: the next site; after the last one all of them."""
+        workbench = self.bench.workbench
+        assert workbench is not None
+        places = (None, *workbench.sites)
+        now = places.index(self.site) if self.site in places else 0
+        self.look_at(self.outcome, site=places[(now + 1) % len(places)])
 
     def _next(self, key: str, words: tuple[object, ...], now: object) -> None:
         place = words.index(now) if now in words else -1
@@ -231,7 +247,7 @@ class EffectKeys(Room):
                     }
                 )
                 break
-        if found.outcome != self.outcome:
-            self.look_at(found.outcome)
+        if (found.outcome, found.site) != (self.outcome, self.site):
+            self.look_at(found.outcome, site=found.site)
         at = found.effect.bandwidths
         self.stand(round_width(max(at.below, at.above)) if found.width is None else found.width)

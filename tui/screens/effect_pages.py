@@ -161,7 +161,7 @@ def numbers_page(prepared: Prepared, reach: float, swept: Sweep | None) -> Table
 
 
 def _means(prepared: Prepared, reach: float) -> Numbers:
-    bins = prepared.workbench.bins(prepared.outcome, reach, 20)
+    bins = prepared.workbench.bins(prepared.outcome, reach, 20, prepared.site)
     cutoff = prepared.effect.cutoff or 0.0
     scale = 100.0 if prepared.effect.binary else 1.0
     spread = scale * prepared.effect.reading.std_error

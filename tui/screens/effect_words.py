@@ -6,6 +6,7 @@ from dataclasses import dataclass
 from typing import TYPE_CHECKING, Final
 
 from study.document import Study
+from study.literal import clean
 from tui.look import Ink
 from tui.screens.lines import Line, wrapped
 
@@ -54,6 +55,10 @@ def headline_lines(standing: Standing, width: int) -> list[Line]:
 
     effect = standing.effect
     first, _, rest = effect_headline(effect).partition("  ")
+    if effect.kind in ("site", "step", "segment"):
+        first = f"{clean(effect.where)}: {first}"
+    elif effect.kind == "pooled":
+        first = f"All sites: {first}"
     reading, at = effect.reading, effect.bandwidths
     verdict = "holds zero" if _holds_zero(effect) else "excludes zero"
     near = (

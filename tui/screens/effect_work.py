@@ -28,6 +28,7 @@ class Asked:
     workbench: Workbench
     outcome: str
     width: float | None
+    site: str | None = None
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -37,6 +38,7 @@ class Found:
     outcome: str
     width: float | None
     effect: Effect
+    site: str | None = None
 
 
 @dataclass(frozen=True, slots=True, kw_only=True)
@@ -66,24 +68,25 @@ class Prepared:
     effect: Effect
     at_once: bool
     width: float | None
+    site: str | None = None
     _means: dict[tuple[float, int], Bins] = field(default_factory=dict, repr=False, compare=False)
 
     def means(self, reach: float, count: int) -> Bins:
         """Binned means, kept: a width that moves inside the picture does not change them."""
         if (reach, count) not in self._means:
-            self._means[reach, count] = self.workbench.bins(self.outcome, reach, count)
+            self._means[reach, count] = self.workbench.bins(self.outcome, reach, count, self.site)
         return self._means[reach, count]
 
     @property
     def found(self) -> Found:
         """The effect, as something that was looked at."""
-        return Found(outcome=self.outcome, width=self.width, effect=self.effect)
+        return Found(outcome=self.outcome, width=self.width, effect=self.effect, site=self.site)
 
     def bandwidths_at(self, width: float | None) -> Bandwidths:
         """The bandwidths of a width; None is the study's own."""
         if width is None:
             return self.own
-        return self.workbench.line(self.outcome).at(width)
+        return self.workbench.line(self.outcome, self.site).at(width)
 
     def reading_at(self, width: float | None) -> Effect:
         """The effect with this width's reading; randomisation and notes stay those of the full effect.
@@ -94,7 +97,9 @@ class Prepared:
             When a side can't carry the fit.
         """
         at = self.bandwidths_at(width)
-        return replace(self.effect, reading=self.workbench.reading(self.outcome, at), bandwidths=at)
+        return replace(
+            self.effect, reading=self.workbench.reading(self.outcome, at, self.site), bandwidths=at
+        )
 
 
 def prepare(asked: Asked, should_stop: Callable[[], bool]) -> Prepared:
@@ -105,30 +110,31 @@ def prepare(asked: Asked, should_stop: Callable[[], bool]) -> Prepared:
     CannotEstimate
         When the outcome has no estimate at the study's own width.
     """
-    bench, outcome = asked.workbench, asked.outcome
-    own = bench.chosen(outcome)
+    bench, outcome, site = asked.workbench, asked.outcome, asked.site
+    own = bench.chosen(outcome, site)
     effect = find(asked).effect
     started = perf_counter()
-    bench.reading(outcome, effect.bandwidths)
+    bench.reading(outcome, effect.bandwidths, site)
     took = perf_counter() - started
     at_once = took < _AT_ONCE_S
-    grid = bench.sweep_grid(outcome, _SWEEP_POINTS if at_once else _SLOW_SWEEP_POINTS)
+    grid = bench.sweep_grid(outcome, _SWEEP_POINTS if at_once else _SLOW_SWEEP_POINTS, site)
     return Prepared(
         workbench=bench,
         outcome=outcome,
         own=own,
-        widest=bench.widest(outcome),
+        widest=bench.widest(outcome, site),
         narrowest=min(float(grid[0]), 0.2 * max(own.below, own.above)),
         grid=grid,
         effect=effect,
         at_once=at_once,
         width=asked.width,
+        site=site,
     )
 
 
 def sweep(prepared: Prepared, should_stop: Callable[[], bool]) -> Sweep:
     """The effect against the width."""
-    return prepared.workbench.sweep(prepared.outcome, prepared.grid, should_stop)
+    return prepared.workbench.sweep(prepared.outcome, prepared.grid, should_stop, prepared.site)
 
 
 def find(asked: Asked) -> Found:
@@ -139,14 +145,14 @@ def find(asked: Asked) -> Found:
     CannotEstimate
         When a side can't carry the fit.
     """
-    effect = asked.workbench.effect(asked.outcome, asked.width)
-    return Found(outcome=asked.outcome, width=asked.width, effect=effect)
+    effect = asked.workbench.effect(asked.outcome, asked.width, asked.site)
+    return Found(outcome=asked.outcome, width=asked.width, effect=effect, site=asked.site)
 
 
 def best_width(asked: Asked) -> float:
     """The MSE-optimal width of a study that declares another one."""
     study = edit(asked.workbench.study, {"estimate.bandwidth": "mse"})
-    return float(f"{asked.workbench.with_study(study).chosen(asked.outcome).below:.4g}")
+    return float(f"{asked.workbench.with_study(study).chosen(asked.outcome, asked.site).below:.4g}")
 
 
 def draw_chart(chart: EffectChart, prepared: Prepared, at: Bandwidths, *, reach: float, score: str) -> None:
@@ -154,7 +160,7 @@ def draw_chart(chart: EffectChart, prepared: Prepared, at: Bandwidths, *, reach:
     bench, outcome = prepared.workbench, prepared.outcome
     count = max(8, min(40, (chart.size.width or 80) // 4))
     bins = prepared.means(reach, count)
-    curve = bench.curve(outcome, at)
+    curve = bench.curve(outcome, at, site=prepared.site)
     curve = replace(curve, below=_ascending(curve.below))
     binary = prepared.effect.binary
     if binary:
