@@ -20,6 +20,7 @@ import argparse
 
 import numpy as np
 
+from estimation.cluster_ladder import ClusterLadder
 from estimation.errors import CannotEstimate
 from estimation.inference import quantile
 from estimation.line_fit import Bandwidths
@@ -90,16 +91,15 @@ def main(draws: int, seed: int) -> None:
                 sample = draw(np.random.default_rng([seed, clusters, across, i]), clusters, across)
                 widths = Bandwidths.common(WIDTH)
                 try:
-                    sandwich, jackknife = (
-                        fit_rows(sample, widths, kernel="triangular", order=1, variance=kind)
-                        for kind in ("hc0", "neighbour")
-                    )
+                    fit = fit_rows(sample, widths, kernel="triangular", order=1, variance="hc0")
                 except CannotEstimate:
                     continue  # no cluster of one side inside the bandwidth
-                estimates.append(float(jackknife.jump[0]))
+                ladder = ClusterLadder.build(sample, kernel="triangular", order=1)
+                jackknife = ladder.spread(widths, order=1, variance="neighbour")
+                estimates.append(float(fit.jump[0]))
                 found = {
-                    "sandwich": (float(sandwich.covariance[0, 0]), sandwich.clusters or 0),
-                    "jackknife": (float(jackknife.covariance[0, 0]), jackknife.clusters or 0),
+                    "sandwich": (float(fit.covariance[0, 0]), fit.clusters or 0),
+                    "jackknife": (float(jackknife.covariance[0, 0]), jackknife.clusters),
                 } | {name: from_residuals(sample, name) for name in names[:2]}
                 for name, (variance, count) in found.items():
                     error = float(np.sqrt(variance))

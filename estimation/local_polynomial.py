@@ -15,13 +15,15 @@ Calonico, S., Cattaneo, M. & Titiunik, R. (2014). Robust nonparametric confidenc
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from dataclasses import dataclass
+from functools import partial
 
 import numpy as np
 
 from estimation.adjustment import common_coefficients
 from estimation.arrays import Matrix, Vector
-from estimation.cluster_ladder import ClusterLadder, cluster_rule
+from estimation.cluster_ladder import SINGULAR, cluster_rule
 from estimation.kernels import count_inside, kernel_values
 from estimation.line_fit import Bandwidths, LineFit, too_few
 from estimation.sample import Sample, Side, SideName
@@ -111,19 +113,19 @@ def fit_rows(
     adjust
         Whether the sample's covariates adjust the earlier variables (see `estimation.adjustment`).
     """
+    # The jackknife scores a cluster that a side can't do without by the fit's own residuals.
+    jackknife = sample.below.cluster is not None and cluster_rule(variance) == "jackknife"
+    residuals = "hc0" if jackknife else variance
     parts = {
-        name: _rows_of_side(sample, name, side, bandwidths, kernel=kernel, order=order, variance=variance)
+        name: _rows_of_side(sample, name, side, bandwidths, kernel=kernel, order=order, variance=residuals)
         for name, side in sample.sides
     }
     below, above = parts["below"], parts["above"]
     sign = sample.treated_sign
     covariance, clusters = _joint_spread(sample, below, above, "plain")
     robust_covariance, _ = _joint_spread(sample, below, above, "robust")
-    if clusters is not None and cluster_rule(variance) == "jackknife":
-        spread = ClusterLadder.build(sample, kernel=kernel, order=order).spread(
-            bandwidths, order=order, variance=variance
-        )
-        covariance, robust_covariance = spread.covariance, spread.robust_covariance
+    if jackknife:
+        covariance, robust_covariance = _jackknife(sample, parts, bandwidths, kernel=kernel, order=order)
     return LineFit(
         levels_below=below.level,
         levels_above=above.level,
@@ -230,5 +232,54 @@ def _joint_spread(
     # Row by row, this is the sandwich; `fit_rows` puts the jackknife in its place where the study wants that.
     scores = np.concatenate((-low, high))
     cluster = np.concatenate((sample.below.cluster[: len(low)], sample.above.cluster[: len(high)]))
-    spread = clustered_spread(scores, cluster)
+    counted = np.concatenate((sample.below.weights(len(low)), sample.above.weights(len(high)))) > 0.0
+    spread = clustered_spread(scores[counted], cluster[counted])
     return spread.covariance, spread.clusters
+
+
+def _jackknife(
+    sample: Sample, parts: Mapping[SideName, _SideRows], bandwidths: Bandwidths, *, kernel: str, order: int
+) -> tuple[Matrix, Matrix]:
+    """(G − 1)/G · Σ_g (jump without g − jump)², plain and bias-corrected, by fitting again without each cluster."""
+    changes: dict[int, Matrix] = {}
+    for name, side in sample.sides:
+        rows, sign = parts[name], -1.0 if name == "below" else 1.0
+        assert side.cluster is not None
+        inside = side.cluster[: len(rows.plain_scores)]
+        centred = side.values[: len(inside)] - side.values[: len(inside)].mean(axis=0)
+        fit = partial(_levels, side, centred, bandwidths.of(name), kernel, order)
+        whole, whole_left = fit(np.ones(len(inside)))
+        for g in np.unique(inside[side.weights(len(inside)) > 0.0]):
+            levels, left = fit((inside != g).astype(np.float64))
+            change = whole - levels
+            scores = np.stack((rows.plain_scores[inside == g], rows.robust_scores[inside == g])).sum(axis=1)
+            stands = left / whole_left > SINGULAR
+            change[0] = change[0] if stands[0] else scores[0]
+            change[1] = change[1] if stands.all() else scores[1]
+            changes[int(g)] = changes.get(int(g), 0.0) + sign * change
+    every = np.stack(list(changes.values()))
+    share = (len(every) - 1) / len(every)
+    return share * every[:, 0].T @ every[:, 0], share * every[:, 1].T @ every[:, 1]
+
+
+def _levels(
+    side: Side, values: Matrix, widths: tuple[float, float], kernel: str, order: int, keep: Vector
+) -> tuple[Matrix, Vector]:
+    """((plain, bias-corrected) levels with rows weighted by `keep`, shape (2, v); determinants of both fits' A)."""
+    (bandwidth, pilot), size = widths, order + 1
+    found = []
+    for width, parameters in ((bandwidth, size), (pilot, size + 1)):
+        count = count_inside(side.distance, width, kernel)
+        distance = side.distance[:count]
+        k = kernel_values(distance, width, kernel) * side.weights(count) * keep[:count]
+        basis = np.vander(distance / width, parameters, increasing=True)
+        q, r = np.linalg.qr(basis * np.sqrt(k)[:, None])
+        determinant = float(np.prod(np.diagonal(r))) ** 2
+        # Where the rows left can't carry a fit its change is not asked for.
+        weights = np.linalg.solve(r, q.T) * np.sqrt(k) if determinant > 0.0 else np.zeros(basis.T.shape)
+        found.append((count, weights, determinant))
+    (count, weights, near), (pilot_count, pilot_weights, far) = found
+    left_over = float(weights[0] @ (side.distance[:count] / pilot) ** size)
+    level = weights[0] @ values[:count]
+    shift = left_over * (pilot_weights[size] @ values[:pilot_count])
+    return np.stack((level, level - shift)), np.array([near, far])

@@ -63,7 +63,9 @@ def interval_rows(
     if which == "bias-aware":
         safe = np.where(error > 0.0, error, np.nan)
         bias = np.where(np.isfinite(fits.unit_bias), fits.unit_bias * curvature[0], np.nan)
-        reach = critical_values(bias / safe, level) * error
+        # As in one honest interval: longer by the ratio of t to the normal quantile where clusters are few.
+        longer = _quantiles(level, fits.clusters) / quantile(level)
+        reach = critical_values(bias / safe, level) * longer * error
     else:
         if which == "robust":
             centre, reach = _estimates(fits.robust_jump, fits.robust_covariance, fuzzy=fuzzy)
