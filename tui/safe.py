@@ -7,9 +7,11 @@ forbidden elsewhere in this package, which a test enforces.
 
 from __future__ import annotations
 
+import asyncio
 import sys
 import traceback
 from collections.abc import Sequence
+from functools import partial
 from pathlib import Path
 from typing import Any
 
@@ -119,6 +121,16 @@ class SafeApp(WireApp[Result]):
         """Show a notice, literally; `markup` is accepted for the toolkit's own calls and ignored."""
         super().notify(clean(message), title=clean(title), severity=severity, timeout=timeout, markup=False)
 
+    def on_mount(self) -> None:
+        """A fault in a task or a callback that nobody waits for is the app's fault too: it must not die unseen."""
+        asyncio.get_running_loop().set_exception_handler(self._fault_in_loop)
+
+    def _fault_in_loop(self, loop: asyncio.AbstractEventLoop, context: dict[str, Any]) -> None:
+        error = context.get("exception")
+        if isinstance(error, Exception) and self._running:
+            self.call_later(partial(_raise, error))  # in the app's own queue, where every fault ends alike
+        # Anything else is the loop's talk about its own affairs; its default would write over the screen.
+
     def _fatal_error(self) -> None:
         # Textual's own screen prints the values of local variables, which here are somebody's records.
         self.bell()
@@ -143,6 +155,10 @@ class SafeApp(WireApp[Result]):
         except OSError:
             return None
         return path
+
+
+def _raise(error: Exception) -> None:
+    raise error
 
 
 def _frames(error: BaseException) -> traceback.StackSummary:

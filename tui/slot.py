@@ -36,6 +36,11 @@ class Slot(Generic[Request, Answer]):
         Called on the event loop, only for answers of the current generation.
     failed : callable (request, exception) -> None
         Called on the event loop when `work` raised; without it the error would be silent.
+
+    Notes
+    -----
+    When `show` or `failed` raises, that is a fault of the program: it goes to the event loop's exception handler, which
+    the app has set, instead of waiting in a task that nobody asks.
     """
 
     def __init__(
@@ -68,6 +73,7 @@ class Slot(Generic[Request, Answer]):
         if self._task is None:
             self._stop = False
             self._task = asyncio.get_running_loop().create_task(self._run(), name=f"slot {self.name}")
+            self._task.add_done_callback(_tell_loop)
 
     def supersede(self, request: Request) -> None:
         """Ask for an answer and drop whatever is still being worked on: the data or the study has changed."""
@@ -107,3 +113,9 @@ class Slot(Generic[Request, Answer]):
         # A thread cannot be interrupted: an answer to an old question still arrives and is dropped here.
         if generation == self._generation:
             self._show(request, answer)
+
+
+def _tell_loop(task: asyncio.Task[None]) -> None:
+    error = None if task.cancelled() else task.exception()
+    if error is not None:
+        task.get_loop().call_exception_handler({"message": task.get_name(), "exception": error, "task": task})

@@ -148,10 +148,11 @@ def test_nothing_harmful_is_seen_on_the_wire() -> None:
         assert b"\x07" not in after
 
 
-def test_a_crash_shows_no_data() -> None:
+@pytest.mark.parametrize("key", ["x", "k", "f"], ids=["in a key", "showing an answer", "telling a failure"])
+def test_a_crash_shows_no_data(key: str) -> None:
     with Terminal(python("tests/tui/wire_app.py"), size=(100, 30)) as terminal:
         terminal.wait_for("local randomisation")
-        terminal.type("x")
+        terminal.type(key)
         terminal.settle(quiet=0.6)
         assert b"stopped because of a mistake in the program (RuntimeError)" in terminal.raw
         assert b"Alder Street" not in terminal.raw

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import asyncio
 import threading
 from collections.abc import Callable
 
@@ -115,6 +116,22 @@ async def test_asking_from_show_runs_again() -> None:
     slot.ask(3)
     await slot.settle()
     assert shown == [3, 2, 1]
+
+
+async def test_a_fault_while_showing_reaches_the_loop_at_once() -> None:
+    told: list[object] = []
+    asyncio.get_running_loop().set_exception_handler(lambda loop, context: told.append(context["exception"]))
+
+    def show(request: int, answer: int) -> None:
+        raise RuntimeError("the picture has no such row")
+
+    slot: Slot[int, int] = Slot(
+        "count", lambda request, should_stop: request, show=show, failed=lambda request, error: None
+    )
+    slot.ask(3)
+    await slot.settle()
+    await asyncio.sleep(0)
+    assert [str(error) for error in told] == ["the picture has no such row"]
 
 
 def test_none_is_not_a_request() -> None:

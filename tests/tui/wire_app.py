@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import sys
+from collections.abc import Callable
 from typing import ClassVar
 
 from gallery import answers, at_width, effect_chart, show_width, sweep_chart, table
@@ -10,18 +11,19 @@ from textual.app import ComposeResult
 
 import tui.wire
 from tui.safe import SafeApp, Words
+from tui.slot import Slot
 from tui.widgets.chart import EffectChart
 from tui.widgets.sweep import SweepChart
 
 
 class WireTestApp(SafeApp[None]):
-    """left and right change the width, s starts a status line at 2 Hz, r repaints everything, x crashes."""
+    """left and right change the width, s starts a status line at 2 Hz, r repaints everything, x, k and f crash."""
 
     ENABLE_COMMAND_PALETTE = False
     AUTO_FOCUS = None
     BINDINGS: ClassVar = [
         ("left", "width(-1)"), ("right", "width(1)"), ("s", "status"), ("r", "redraw"), ("x", "crash"), ("q", "quit"),
-        ("t", "table"), ("n", "notice"),
+        ("t", "table"), ("n", "notice"), ("k", "crash_showing"), ("f", "crash_failing"),
     ]  # fmt: skip
     CSS = (
         "EffectChart { height: 2fr } SweepChart { height: 1fr } Words { height: 1 } VTable { display: none }"
@@ -75,6 +77,25 @@ class WireTestApp(SafeApp[None]):
         """Fail, with a datum in a local variable."""
         secret_record = "Alder Street 7"
         raise RuntimeError(f"could not place {secret_record}")
+
+    def action_crash_showing(self) -> None:
+        """Fail where a slot's answer is shown, in a task that nobody waits for."""
+        self.slot: Slot[int, int] = Slot(
+            "count", lambda request, should_stop: request, show=self._crash, failed=self._crash
+        )
+        self.slot.ask(1)
+
+    def action_crash_failing(self) -> None:
+        """Fail where a slot's failure is told."""
+
+        def work(request: int, should_stop: Callable[[], bool]) -> int:
+            raise ValueError("no answer")
+
+        self.slot = Slot("count", work, show=self._crash, failed=self._crash)
+        self.slot.ask(1)
+
+    def _crash(self, request: int, answer: object) -> None:
+        self.action_crash()
 
 
 if __name__ == "__main__":
