@@ -136,6 +136,7 @@ class Canvas:
         """
         if not 0 <= y < self.height:
             return x + len(words)
+        words = words.replace("\N{NO-BREAK SPACE}", " ")  # nothing is ever broken here
         if self.ascii_only:
             words = "".join(self._plain(character) for character in words)
         skip = max(0, -x)

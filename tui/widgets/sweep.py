@@ -10,6 +10,7 @@ import numpy as np
 import numpy.typing as npt
 
 from study.literal import clean
+from study.wording import percent
 from tui.canvas import Canvas, narrow
 from tui.look import Ink
 from tui.plot_area import PlotArea, Scale, even_scale, gutter
@@ -81,7 +82,7 @@ class SweepChart(PlotWidget):
             Level of the interval, for the legend.
         """
         self._sweep, self._label = sweep, narrow(clean(label))
-        self._interval = f"{100 * level:g}% interval"
+        self._interval = f"{percent(level)} interval"
         self._message = ""
         self.repaint()
 
