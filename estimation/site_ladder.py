@@ -7,7 +7,6 @@ variances; one pair of widths a site.
 
 from __future__ import annotations
 
-from concurrent.futures import ThreadPoolExecutor
 from dataclasses import dataclass
 from typing import Any, Final
 
@@ -256,10 +255,10 @@ class SiteLadder:
             [np.bincount(site, weights=column, minlength=sites) / rows for column in values.T], axis=1
         )
 
-        def side(named: tuple[SideName, Mask]) -> SideOfSites:
-            name, mask = named
+        def side(name: SideName, mask: Mask) -> SideOfSites:
             own = np.flatnonzero(mask)
-            by_site = own[np.lexsort((distance[own], site[own]))]
+            outward = own[np.argsort(distance[own])]
+            by_site = outward[order_by_site(site[outward], sites)]
             counts = np.bincount(site[by_site], minlength=sites)
             return SideOfSites.build(
                 name,
@@ -272,8 +271,8 @@ class SiteLadder:
                 resolution=resolution,
             )
 
-        with ThreadPoolExecutor(2) as pool:
-            below, upper = pool.map(side, (("below", ~above), ("above", above)))
+        # One after the other: thousands of small calls would only pass the interpreter to and fro between threads.
+        below, upper = (side("below", ~above), side("above", above))
         return cls(
             below=below,
             above=upper,
@@ -320,6 +319,15 @@ class SiteLadder:
             weights = solve(hankel(moments.sum(axis=0)[None], size), unit)[0, :, 0]
             sides.append((moments[:, :size] @ weights).astype(np.float64))
         return np.asarray(0.5 * (sides[0] + sides[1]))
+
+
+def order_by_site(site: Codes, sites: int) -> Codes:
+    """Indices that put rows in the order of their sites, rows of one site as they were.
+
+    Short codes are sorted digit by digit, in a pass or two over the rows.
+    """
+    codes = site.astype(np.uint16) if sites <= np.iinfo(np.uint16).max else site
+    return np.argsort(codes, kind="stable").astype(np.int64, copy=False)
 
 
 @dataclass(frozen=True, slots=True)

@@ -18,7 +18,7 @@ from estimation.line_fit import Bandwidths
 from estimation.randomisation import Randomisation, randomise
 from estimation.reading import Reading
 from estimation.sample import Sample, build_sample, outward_order
-from estimation.site_ladder import SiteLadder
+from estimation.site_ladder import SiteLadder, order_by_site
 from estimation.variance import mass_point_starts
 from estimation.window import choose_window
 from study.assemble import Assigned, assemble
@@ -461,7 +461,7 @@ class Workbench:
         site = self.assigned.site
         assert site is not None  # asked only where there are sites
         rows = np.flatnonzero(self._used)
-        order = rows[np.argsort(site[rows], kind="stable")]
+        order = rows[order_by_site(site[rows], len(self.sites))]
         ends = np.searchsorted(site[order], np.arange(len(self.sites) + 1))
         return [order[a:b] for a, b in pairwise(ends)]
 
@@ -513,9 +513,8 @@ class Workbench:
     def _cutoff(self, site: str | None) -> float | None:
         if site is None:
             return self.study.assignment.cutoff
-        rows = self._outward(site)
-        first = rows[0] if len(rows[0]) else rows[1]
-        return float(self.assigned.cutoffs[first[0]]) if len(first) else None
+        rows = self._rows_by_site[self._place_of[site]]
+        return float(self.assigned.cutoffs[rows[0]]) if len(rows) else None
 
     def _randomisation(self, outcome: str, site: str | None) -> Randomisation | str:
         """The local randomisation answer, or the sentence that says why there is none."""
