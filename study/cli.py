@@ -19,6 +19,7 @@ Cutbank: what did a programme change that was handed out by a line?
   cutbank run STUDY [--out FOLDER] [--json] estimate a study and print the result
   cutbank verify STUDY                      read and check a study, estimate nothing
   cutbank seal STUDY [--by NAME]            freeze the plan, so that masked outcomes may be seen
+  cutbank release STUDY --to FOLDER         write what may leave: report, tables, figures, record
   cutbank columns FILE [--table NAME]       list a data file's columns, kinds, gaps and ranges
   cutbank assign STUDY --to FILE            write each row's side and position (.csv or .parquet)
 
@@ -36,6 +37,7 @@ USAGE: Final = {
     "run": "cutbank run STUDY [--out FOLDER] [--json] [--ascii]",
     "verify": "cutbank verify STUDY",
     "seal": "cutbank seal STUDY [--by NAME]",
+    "release": "cutbank release STUDY --to FOLDER",
     "columns": "cutbank columns FILE [--table NAME]",
     "assign": "cutbank assign STUDY --to FILE",
 }
@@ -135,6 +137,11 @@ def _declare_seal(parser: ArgumentParser) -> None:
     parser.add_argument("--by", metavar="NAME")
 
 
+def _declare_release(parser: ArgumentParser) -> None:
+    parser.add_argument("study", metavar="STUDY")
+    parser.add_argument("--to", metavar="FOLDER", required=True)
+
+
 def _declare_columns(parser: ArgumentParser) -> None:
     parser.add_argument("file", metavar="FILE")
     parser.add_argument("--table", metavar="NAME")
@@ -192,6 +199,14 @@ def _seal(asked: Namespace) -> int:
     return seal_study(Path(asked.study), by=asked.by)
 
 
+def _release(asked: Namespace) -> int:
+    from pathlib import Path
+
+    from study.commands.release import release_study
+
+    return release_study(Path(asked.study), to=Path(asked.to))
+
+
 def _columns(asked: Namespace) -> int:
     from pathlib import Path
 
@@ -214,6 +229,7 @@ _COMMANDS: Final[dict[str, tuple[Callable[[ArgumentParser], None], Callable[[Nam
     "run": (_declare_run, _run),
     "verify": (_declare_verify, _verify),
     "seal": (_declare_seal, _seal),
+    "release": (_declare_release, _release),
     "columns": (_declare_columns, _columns),
     "assign": (_declare_assign, _assign),
 }
