@@ -304,23 +304,23 @@ def _changes(
         inner = _Parts.of(fit, near.mass[:, some], near.first[:, :, some])
         outer = _Parts.of(pilot, wide.mass[:, some], wide.first[:, :, some])
         if rule == "jackknife":
-            plain[:, some], robust[:, some], stands = _left_out(fit, pilot, inner, outer, scale)
-            if stands.all():
+            plain[:, some], robust[:, some], stands, both = _left_out(fit, pilot, inner, outer, scale)
+            if both.all():
                 continue
         else:
-            stands = np.zeros(inner.gram.shape[2], dtype=bool)
+            stands = both = np.zeros(inner.gram.shape[2], dtype=bool)
         # A cluster without which a side can't be fitted has its sandwich score for a change.
         curve = pilot.basis.T @ pilot.fitted * (wide.ratio / near.ratio) ** np.arange(order + 2)[:, None]
         scores = _scores(fit, pilot, inner, outer, curve, near.mass[:, some], scale)
         plain[:, some] = np.where(stands, plain[:, some], scores[0])
-        robust[:, some] = np.where(stands, robust[:, some], scores[1])
+        robust[:, some] = np.where(both, robust[:, some], scores[1])
     return plain, robust
 
 
 def _left_out(
     fit: _Fit, pilot: _Fit, inner: _Parts, outer: _Parts, scale: float
-) -> tuple[Matrix, Matrix, Mask]:
-    """Level less the level without each cluster, plain and bias-corrected, and where both can be fitted without."""
+) -> tuple[Matrix, Matrix, Mask, Mask]:
+    """Level less the level without each cluster, plain and bias-corrected, and where each can be fitted without."""
     solved, stands = _without(inner.gram, fit.target)
     pilot_solved, pilot_stands = _without(outer.gram, pilot.target)
     level = np.einsum("ig,ivg->vg", solved, inner.score)
@@ -329,7 +329,7 @@ def _left_out(
     # left·top less (left − Δleft)(top − Δtop), where left = Σ l u^(p+1) and top is the pilot's coefficient.
     whole_left, whole_top = fit.target @ fit.fitted_next, pilot.target @ pilot.fitted
     shift = whole_left * top + left * whole_top[:, None] - left * top
-    return level, level - scale * shift, stands & pilot_stands
+    return level, level - scale * shift, stands, stands & pilot_stands
 
 
 def _scores(

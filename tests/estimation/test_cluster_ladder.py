@@ -254,6 +254,37 @@ def test_a_cluster_that_carries_a_side_is_scored_instead_of_left_out() -> None:
     assert spread.covariance[0, 0] == pytest.approx(share * np.sum(np.square(upper)), rel=1e-9)
 
 
+def test_a_cluster_that_only_the_pilot_needs_is_left_out_of_the_rest() -> None:
+    # Without cluster 99 the lower side has two distinct scores: enough for a line, too few for the quadratic.
+    data = draw(21)
+    x = np.where(data["above"], data["position"], -np.ceil(-data["position"] * 5) / 5)
+    data["position"] = np.where(data["above"], x, np.maximum(x, -0.8))
+    data["cluster"] = np.where(
+        np.isclose(data["position"], [[-0.6], [-0.8]]).any(axis=0), 99, data["cluster"]
+    )
+    sample = sample_of(data)
+    widths = Bandwidths.common(0.9)
+    rows = fit_rows(sample, widths, kernel="triangular", order=1, variance="neighbour")
+    spread = ClusterLadder.build(sample, kernel="triangular", order=1).spread(
+        widths, order=1, variance="neighbour"
+    )
+    alike(spread.covariance, rows.covariance)
+    alike(spread.robust_covariance, rows.robust_covariance)
+    without = {key: column[data["cluster"] != 99] for key, column in data.items()}
+    below = np.unique(without["position"][~without["above"]])
+    assert len(below) == 2
+    # By hand: the lower level less the level of the straight line through what is left there.
+    side, k = ~without["above"], (1 - np.abs(without["position"]) / 0.9) * without["weight"]
+    line = np.polynomial.polynomial.polyfit(
+        without["position"][side], without["outcome"][side], 1, w=np.sqrt(k[side])
+    )
+    ladder = ClusterLadder.build(sample, kernel="triangular", order=1)
+    found = ladder.changes(widths, order=1, variance="neighbour")
+    share = np.sqrt(1 - 1 / found.inside)
+    change = found.plain[found.names == 99, 0][0] / share
+    assert change == pytest.approx(-(rows.levels_below[0] - line[0]), rel=1e-9)
+
+
 def test_the_line_reads_clustered_errors_with_and_without_covariates() -> None:
     data = draw(11)
     rng = np.random.default_rng(4)
