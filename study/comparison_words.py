@@ -67,7 +67,7 @@ def site_text(comparison: Comparison, row: SiteRow) -> SiteText:
     if row.reading is None or i is None:
         return SiteText(
             name=clean(row.name),
-            cutoff=width_text(row.cutoff),
+            cutoff="" if comparison.kind == "segment" else width_text(row.cutoff),
             estimate="",
             low="",
             high="",
@@ -87,7 +87,7 @@ def site_text(comparison: Comparison, row: SiteRow) -> SiteText:
     widths = row.bandwidths
     return SiteText(
         name=clean(row.name),
-        cutoff=width_text(row.cutoff),
+        cutoff="" if comparison.kind == "segment" else width_text(row.cutoff),
         estimate=figure(scale * robust.estimate, spread, sign=True),
         low=figure(scale * robust.low, spread),
         high=figure(scale * robust.high, spread),
@@ -132,8 +132,9 @@ def site_sentence(comparison: Comparison, row: SiteRow) -> str:
     text = site_text(comparison, row)
     if text.reason is not None:
         return _unestimated(comparison, row)
+    at = f" at {text.cutoff}" if text.cutoff else ""
     return (
-        f"{text.name} at {text.cutoff}: {text.estimate} ({text.low} to {text.high}), with all {comparison.kind}s at once "
+        f"{text.name}{at}: {text.estimate} ({text.low} to {text.high}), with all {comparison.kind}s at once "
         f"{text.band_low} to {text.band_high}; drawn toward the mean {text.shrunken or 'no answer'}. {text.rows} rows within "
         f"{text.width}; {text.share} of the units at the line."
     )

@@ -112,14 +112,15 @@ class Compared:
         """Return all of it as plain lines."""
         lines = [*wrapped(opening(self.comparison, study), 78), ""]
         for text in site_texts(self.comparison, self.by):
+            at = f"at {text.cutoff}  " if text.cutoff else ""
             if text.reason is None:
                 lines.append(
-                    f"{text.name}  at {text.cutoff}  {text.estimate} ({text.low} to {text.high})  "
+                    f"{text.name}  {at}{text.estimate} ({text.low} to {text.high})  "
                     f"all at once {text.band_low} to {text.band_high}  drawn in {text.shrunken or '–'}  "
                     f"{text.rows} rows  {text.share}"
                 )
             else:
-                lines.append(f"{text.name}  at {text.cutoff}  no local estimate")
+                lines.append(f"{text.name}  {at}no local estimate")
         lines.append("")
         for said in self.sentences():
             lines += wrapped("· " + said, 78, indent="  ")
