@@ -54,7 +54,7 @@ class SideWeights:
     Attributes
     ----------
     distance
-        |score − cutoff|, ascending from 0, shape (m,).
+        |score − cutoff|, ascending from the nearest unit's, shape (m,).
     plain, corrected
         Weight of a unit there whose own weight is 1, shape (m,).
     total
@@ -94,16 +94,16 @@ def unit_weights(
     treated_sign
         1 where the upper side is treated, −1 where the lower is.
     points
-        How many distances, from the line to the farther of bandwidth and pilot.
+        How many distances, from the nearest unit to the farther of bandwidth and pilot.
     stretches
-        How many equal stretches that length is cut into for the shares.
+        How many equal stretches the way from the line to there is cut into for the shares.
     """
 
     def side(sums: SideSums, name: SideName, sign: float) -> SideWeights:
         bandwidth, pilot = bandwidths.of(name)
         plain, correction = _pieces(sums, ladder.kernel, order, bandwidth, pilot)
         farthest = max(bandwidth, pilot)
-        distance = np.linspace(0.0, farthest, points)
+        distance = np.linspace(float(sums.first_scores[0]), farthest, points)
         near, far = _at(plain, distance), _at(correction, distance)
         edges = np.linspace(0.0, farthest, stretches + 1)
         held = np.diff(_up_to(sums, ladder.kernel, plain, edges))

@@ -158,6 +158,7 @@ _EFFECT: Final[tuple[Key, ...]] = (
     _key("effect.donut", "d", "d", "donut", "Leave out the rows nearest to the line: type how near.", edits=True),
     _key("effect.covariates", "c", "c", "covariates", "Let the covariates adjust the headline, or not.", edits=True),
     _key("effect.numbers", "t", "t", "table", "The numbers behind the picture as a table."),
+    _key("effect.weights", "e", "e", "each unit", "Draw how much each unit counts on both sides, with the numbers as a table.", footer=False),
     _key("effect.seen", "l", "l", "looked at", "Every width you stood at in this sitting; Enter goes back to one.", footer=False),
 )  # fmt: skip
 
@@ -187,6 +188,11 @@ _EFFECT_CONCEPTS: Final = (
         word="local randomisation",
         said="Takes the units in a small window around the line to be as good as drawn by lot, and asks how often such a "
         "difference would come up by the draw alone.",
+    ),
+    Concept(
+        word="weight of a unit",
+        said="The effect is a weighted sum of outcomes, and these are the weights. With a sloped fit some far units count against "
+        "their own side; the less of that, the easier the answer is to defend.",
     ),
     Concept(
         word="donut",

@@ -64,10 +64,10 @@ def test_weights_are_those_of_the_row_wise_fit(
         np.testing.assert_allclose(read[inside], sign * plain[inside], rtol=0, atol=2e-3 * scale)
         read = own * np.interp(side.distance, drawn.distance, drawn.corrected)
         np.testing.assert_allclose(read[inside], sign * corrected[inside], rtol=0, atol=5e-3 * scale)
-        # At the line itself nothing is read off between points.
-        first = drawn.plain[0] * own[0]
-        if side.distance[0] == 0.0:
-            np.testing.assert_allclose(first, sign * plain[0], rtol=1e-9)
+        # At the nearest unit nothing is read off between points.
+        assert drawn.distance[0] == side.distance[0]
+        assert drawn.plain[0] * own[0] == pytest.approx(sign * plain[0], rel=1e-9)
+        assert drawn.corrected[0] * own[0] == pytest.approx(sign * corrected[0], rel=1e-9)
         assert drawn.total == pytest.approx(own[plain != 0].sum(), rel=1e-9)
         _shares_are_sums_over_rows(drawn, side, sign * plain, sign * corrected)
         sums += [drawn.share.plain.sum() * sign, drawn.share.corrected.sum() * sign]

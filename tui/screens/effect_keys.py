@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Final
 
 from estimation.choices import INTERVALS, KERNELS, ORDERS
 from tui.screens.room import Room, number
@@ -14,6 +14,19 @@ if TYPE_CHECKING:
     from estimation.line import Sweep
     from tui.screens.effect_words import Standing
     from tui.screens.effect_work import Asked, Found, Prepared
+
+_RETURNED: Final = (
+    "kernel",
+    "order",
+    "interval",
+    "donut",
+    "level",
+    "variance",
+    "curvature",
+    "adjust",
+    "pilot",
+)
+"""Choices put back when a person returns to what was looked at; the width is where they stand, not a choice."""
 
 
 class EffectKeys(Room):
@@ -226,6 +239,12 @@ class EffectKeys(Room):
         assert self.prepared is not None and self.reach is not None
         self.bench.push_screen(numbers_page(self.prepared, self.reach, self.swept))
 
+    def do_weights(self) -> None:
+        """Key e."""
+        from tui.screens.weights_page import WeightsPage
+
+        self.bench.push_screen(WeightsPage(self))
+
     def do_seen(self) -> None:
         """Key l."""
         from tui.screens.effect_pages import seen_page
@@ -238,16 +257,17 @@ class EffectKeys(Room):
         if desk is None:
             return
         choices = found.effect.choices
-        for key in ("kernel", "order", "interval", "donut"):
-            if getattr(desk.study.estimate, key) != getattr(choices, key):
-                self.change(
-                    {
-                        f"estimate.{name}": getattr(choices, name)
-                        for name in ("kernel", "order", "interval", "donut")
-                    }
-                )
-                break
+        back = {
+            f"estimate.{name}": getattr(choices, name)
+            for name in _RETURNED
+            if getattr(desk.study.estimate, name) != getattr(choices, name)
+        }
+        if back:
+            self.change(back)
         if (found.outcome, found.site) != (self.outcome, self.site):
             self.look_at(found.outcome, site=found.site)
+        # The study's own width, as long as it is still chosen the same way, else the number that it was.
         at = found.effect.bandwidths
-        self.stand(round_width(max(at.below, at.above)) if found.width is None else found.width)
+        same = desk.study.estimate.bandwidth == choices.bandwidth
+        then = round_width(max(at.below, at.above)) if found.width is None else found.width
+        self.stand(None if found.width is None and same else then)

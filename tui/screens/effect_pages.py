@@ -240,8 +240,9 @@ def _seen_row(found: Found) -> list[str | tuple[str, Ink]]:
     low, high = effect.leading
     how = f"{choices.kernel}, order {choices.order}, {choices.interval}"
     how += f", donut {choices.donut:g}" if choices.donut else ""
+    how += ", covariates" if choices.adjust else ""
     return [
-        found.outcome,
+        found.outcome if found.site is None else f"{found.outcome} in {found.site}",
         width_text(max(effect.bandwidths.below, effect.bandwidths.above)),
         (how, Ink.MUTED),
         figure(scale * effect.reading.estimate, spread, sign=True),
