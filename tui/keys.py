@@ -379,3 +379,14 @@ def _all_keys() -> Iterator[Key]:
 
 def _cell(text: str) -> str:
     return text.replace("|", "\\|")
+
+
+def _write_key_list(path: str) -> None:
+    from pathlib import Path
+
+    readme = Path(path)
+    readme.write_text(with_key_list(readme.read_text(encoding="utf-8")), encoding="utf-8")
+
+
+if __name__ == "__main__":  # python -m tui.keys: bring the README's key list up to date
+    _write_key_list("README.md")
