@@ -170,7 +170,10 @@ def _sites(comparison: Comparison, result: Result, width: int) -> list[str]:
         for row in rows
     ]
     lines = wrapped_lines(opening(comparison, result.study), width)
-    lines += ["", *table_lines([head, *body], right=tuple(range(1, 10)), indent=0, gap=2), ""]
+    table: list[tuple[str, ...]] = [head, *body]
+    if comparison.kind == "segment":  # a stretch of a border has no cutoff
+        table = [(row[0], *row[2:]) for row in table]
+    lines += ["", *table_lines(table, right=tuple(range(1, len(table[0]))), indent=0, gap=2), ""]
     for sentence in sentences(comparison):
         lines += item_lines(sentence, width)
     return lines
