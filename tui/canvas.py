@@ -65,6 +65,11 @@ class Canvas:
         self.paper = np.zeros(shape, dtype=np.uint8)
         self.bold = np.zeros(shape, dtype=np.bool_)
 
+    def put(self, other: Canvas) -> None:
+        """Take over all that is on another canvas of the same size."""
+        for name in ("glyph", "ink", "paper", "bold"):
+            np.copyto(getattr(self, name), getattr(other, name))
+
     # ---- drawing --------------------------------------------------------------------------------------------
 
     def dots(self, mask: Mask, ink: Ink, *, x: int = 0, y: int = 0) -> None:

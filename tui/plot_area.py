@@ -176,6 +176,12 @@ class PlotArea:
         self.left, self.top, self.width, self.height = left, top, width, height
         self.x, self.y = x, y
 
+    def on(self, canvas: Canvas) -> PlotArea:
+        """Return the same area on another canvas."""
+        return PlotArea(
+            canvas, left=self.left, top=self.top, width=self.width, height=self.height, x=self.x, y=self.y
+        )
+
     # ---- places ---------------------------------------------------------------------------------------------
 
     def columns(self, values: npt.ArrayLike) -> Cells:

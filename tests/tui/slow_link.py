@@ -13,6 +13,7 @@ import select
 import sys
 import time
 from collections import deque
+from collections.abc import Callable, Mapping
 from dataclasses import dataclass
 
 from pty_harness import Terminal, python
@@ -29,11 +30,28 @@ class Measured:
     complete: bool
 
 
-def hold_a_key(command: list[str], rate: float, round_trip: float) -> Measured:
-    """Hold the right arrow for `HELD_S`; return bytes sent and seconds from release to the last paint."""
-    with Terminal(command, size=(102, 30)) as terminal:
-        terminal.wait_for("local randomisation")
+def hold_a_key(
+    command: list[str],
+    rate: float,
+    round_trip: float,
+    *,
+    ready: str = "local randomisation",
+    final: Callable[[str, int], str] = lambda before, pressed: f"width {6.2 * 1.03**pressed:.2f}",
+    environment: Mapping[str, str] | None = None,
+) -> Measured:
+    """Hold the right arrow for `HELD_S`; return bytes sent and seconds from release to the last paint.
+
+    Parameters
+    ----------
+    ready
+        What stands on the screen when the program can be used.
+    final
+        What must stand there in the end, from the screen before and the number of presses.
+    """
+    with Terminal(command, size=(102, 30), environment=environment) as terminal:
+        terminal.wait_for(ready, patience=120.0)
         terminal.settle()
+        screen_before = terminal.text()
         before, answers, keys, arriving = (
             terminal.sent,
             deque[tuple[float, str]](),
@@ -62,7 +80,7 @@ def hold_a_key(command: list[str], rate: float, round_trip: float) -> Measured:
             while arriving and arriving[0][0] <= time.monotonic():
                 terminal.show(arriving.popleft()[1])
                 last = time.monotonic()
-        complete = f"width {6.2 * 1.03**pressed:.2f}" in terminal.text()
+        complete = final(screen_before, pressed) in terminal.text()
         return Measured(sent=sent + terminal.sent - before, late_s=last - start - HELD_S, complete=complete)
 
 

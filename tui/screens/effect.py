@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Callable, Iterator, Sequence
 from dataclasses import replace
-from typing import TYPE_CHECKING, Any, ClassVar, cast
+from typing import TYPE_CHECKING, Any, ClassVar
 
 from textual import events
 from textual.binding import BindingType
@@ -34,6 +34,7 @@ if TYPE_CHECKING:
     from estimation.line import Sweep
     from study.analysis import Workbench
     from tui.screens.effect_work import Asked, Found, Prepared
+    from tui.widgets.answers import AnswerTable
     from tui.widgets.chart import EffectChart
     from tui.widgets.sweep import SweepChart
 
@@ -68,6 +69,8 @@ class EffectScreen(EffectKeys):
         super().__init__(name="effect")
         self.seen: list[Found] = []
         self._problem = ""
+        # Kept beside the tree: looking them up there would take a tenth of the time of a key.
+        self._drawn: tuple[EffectChart, SweepChart, AnswerTable] | None = None
         self._asked_of: Workbench | None = None
         self._prepare: Slot[Asked, Prepared] = Slot(
             "prepare", _prepare, show=self._show_prepared, failed=self._failed
@@ -168,9 +171,11 @@ class EffectScreen(EffectKeys):
         from tui.widgets.chart import EffectChart
         from tui.widgets.sweep import SweepChart
 
-        if not self.query(EffectChart):
-            await self.query_one("#pictures").mount(EffectChart(id="chart"), SweepChart(id="sweep"))
-            await self.query_one("#side").mount(AnswerTable(id="answers"), before="#choices")
+        if self._drawn is None:
+            chart, swept, table = EffectChart(id="chart"), SweepChart(id="sweep"), AnswerTable(id="answers")
+            await self.query_one("#pictures").mount(chart, swept)
+            await self.query_one("#side").mount(table, before="#choices")
+            self._drawn = chart, swept, table
         self.refresh_view()
         self.refresh_keys()
         if self.prepared is not None:
@@ -234,8 +239,8 @@ class EffectScreen(EffectKeys):
         chosen = choices_lines(desk.study, side)
         self.query_one("#choices", Lines).show(chosen if self.has_class("wide") else chosen[:1])
         drawn, digits = answers(standing.effect)
-        for table in self.query("#answers"):
-            table.set_answers(drawn, digits=digits)  # type: ignore[attr-defined]
+        if self._drawn is not None:
+            self._drawn[2].set_answers(drawn, digits=digits)
         room = 30 if self.has_class("wide") else 4 if self.size.height >= 34 else 0
         why: list[Line] = []
         if self.has_class("wide"):
@@ -245,10 +250,11 @@ class EffectScreen(EffectKeys):
             self.on_words()
 
     def _say_nothing(self) -> None:
-        for picture in self.query("#chart, #sweep"):
-            picture.say("")  # type: ignore[attr-defined]
-        for table in self.query("#answers"):
-            table.set_answers([])  # type: ignore[attr-defined]
+        if self._drawn is not None:
+            chart, swept, table = self._drawn
+            chart.say("")
+            swept.say("")
+            table.set_answers([])
         self.query_one("#why", Lines).show([])
         self.query_one("#choices", Lines).show([])
 
@@ -269,7 +275,7 @@ class EffectScreen(EffectKeys):
 
     def _draw_chart(self) -> None:
         standing, prepared = self.standing, self.prepared
-        if standing is None or prepared is None or not self.query("#chart"):
+        if standing is None or prepared is None or self._drawn is None:
             return
         from tui.screens.effect_work import draw_chart
 
@@ -277,28 +283,22 @@ class EffectScreen(EffectKeys):
         self.reach = reach_for(max(at.below, at.above), prepared.widest, self.reach)
         desk = self.bench.desk
         score = (desk.study.columns.score or "score") if desk is not None else "score"
-        draw_chart(self._chart(), prepared, at, reach=self.reach, score=score)
+        draw_chart(self._drawn[0], prepared, at, reach=self.reach, score=score)
 
     def _draw_here(self) -> None:
         standing = self.standing
-        if standing is None or not self.query("#sweep"):
+        if standing is None or self._drawn is None:
             return
         from tui.screens.effect_work import draw_here
 
-        draw_here(self._sweep(), standing.effect)
+        draw_here(self._drawn[1], standing.effect)
 
     def _draw_sweep(self) -> None:
-        if self.prepared is not None and self.swept is not None and self.query("#sweep"):
+        if self.prepared is not None and self.swept is not None and self._drawn is not None:
             from tui.screens.effect_work import draw_sweep
 
-            draw_sweep(self._sweep(), self.prepared, self.swept)
+            draw_sweep(self._drawn[1], self.prepared, self.swept)
             self._draw_here()
-
-    def _chart(self) -> EffectChart:
-        return cast("EffectChart", self.query_one("#chart"))
-
-    def _sweep(self) -> SweepChart:
-        return cast("SweepChart", self.query_one("#sweep"))
 
     # ---- the width --------------------------------------------------------------------------------------------
 
@@ -375,8 +375,8 @@ class EffectScreen(EffectKeys):
         if desk is None or standing is None:
             return [self._why_nothing()]
         lines = all_text(standing, desk.study)
-        for picture in self.query("#chart, #sweep"):
-            lines += ["", *picture.to_text()]  # type: ignore[attr-defined]
+        for picture in () if self._drawn is None else self._drawn[:2]:
+            lines += ["", *picture.to_text()]
         return lines
 
     def copied(self) -> list[str]:

@@ -63,6 +63,7 @@ class SweepChart(PlotWidget):
         self._here: _Here | None = None
         self._marks: tuple[tuple[float, str], ...] = ()
         self._label = self._interval = ""
+        self._still: tuple[Canvas, PlotArea] | None = None
 
     @property
     def has_data(self) -> bool:
@@ -83,6 +84,7 @@ class SweepChart(PlotWidget):
         """
         self._sweep, self._label = sweep, narrow(clean(label))
         self._interval = f"{percent(level)} interval"
+        self._still = None
         self._message = ""
         self.repaint()
 
@@ -95,12 +97,25 @@ class SweepChart(PlotWidget):
     def set_marks(self, marks: Sequence[tuple[float, str]]) -> None:
         """Mark bandwidths on the axis, each with a word for what chose it."""
         self._marks = tuple((float(width), narrow(clean(word))) for width, word in marks)
+        self._still = None
         if self.has_data:
             self.repaint()
 
     def draw(self, canvas: Canvas) -> None:
         """Draw band, sweep, zero, the standing mark and the axes."""
+        still, area = self._stand_still(canvas)
+        canvas.put(still)
+        self._draw_here(area.on(canvas))
+        self._draw_title(canvas)
+
+    def _stand_still(self, canvas: Canvas) -> tuple[Canvas, PlotArea]:
+        """What a moving width leaves as it is: all but the mark, drawn once for each size and sweep."""
         assert self._sweep is not None
+        if self._still is not None:
+            kept = self._still[0]
+            if (kept.width, kept.height, kept.ascii_only) == (canvas.width, canvas.height, canvas.ascii_only):
+                return self._still
+        canvas = Canvas(canvas.width, canvas.height, ascii_only=canvas.ascii_only)
         widths = np.asarray(self._sweep.bandwidth, dtype=np.float64)
         y = even_scale(*_heights(self._sweep), canvas.height - 3)
         left = gutter(y, canvas.height - 3)
@@ -118,8 +133,8 @@ class SweepChart(PlotWidget):
         area.y_labels()
         area.x_axis(name="bandwidth")
         self._draw_marks(area)
-        self._draw_here(area)
-        self._draw_title(canvas)
+        self._still = canvas, area
+        return self._still
 
     def _draw_marks(self, area: PlotArea) -> None:
         row = area.top + area.height
