@@ -176,7 +176,8 @@ class Line:
 
     @property
     def on_ladder(self) -> bool:
-        """Whether readings come from running sums, at once for any number of rows."""
+        """Whether readings come from running sums, at once for any number of rows: all but "hc2" and "hc3", whose
+        leverages differ from row to row; with clusters every variance does."""
         return self.choices.variance in ("neighbour", *FITTED) or self.clusters is not None
 
     def bandwidths(self) -> Bandwidths:

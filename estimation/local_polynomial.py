@@ -109,7 +109,8 @@ def fit_rows(
     sample
         Rows of both sides; any donut is already taken out.
     variance
-        "neighbour", "hc0" … "hc3"; with clusters the sandwich for "hc0" and "hc1", else the jackknife.
+        "neighbour", "hc0" … "hc3"; with clusters the sandwich for "hc0" and "hc1", else the jackknife, which fits
+        again without each cluster in turn (a clustered `Line` asks `estimation.cluster_ladder` instead).
     adjust
         Whether the sample's covariates adjust the earlier variables (see `estimation.adjustment`).
     """
