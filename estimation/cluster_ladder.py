@@ -12,7 +12,7 @@ estimate's true spread, with each cluster on one side (benchmarks/cluster_varian
 straight lines, bandwidth 0.5 on scores out to 1; Monte Carlo error 0.7 points near 95 %):
 
     clusters   neighbours     other clusters   sandwich       jackknife
-    20         28.2 %, 0.13   96.7 %, 1.10     64.5 %, 0.32   94.9 %, 1.29
+    20         28.2 %, 0.13   96.7 %, 1.10     64.5 %, 0.32   95.2 %, 1.45
     40         44.4 %, 0.25   96.1 %, 1.19     81.2 %, 0.61   93.9 %, 1.11
     100        72.2 %, 0.55   94.3 %, 1.12     90.3 %, 0.88   94.3 %, 1.04
 
