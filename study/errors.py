@@ -48,7 +48,7 @@ class Masked(StudyError, CannotEstimate):
         StudyError.__init__(
             self,
             what,
-            "Seal the plan with: cutbank seal STUDY (or set masked = false under [study]).",
+            "Seal the plan with cutbank seal STUDY, or S on the Effect screen (or set masked = false under [study]).",
             CANNOT_ESTIMATE,
         )
         self.sentence = self.what

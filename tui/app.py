@@ -278,6 +278,10 @@ class CutbankApp(EverywhereApp):
         self._opening.supersede(self.desk.study)
         self._refresh_top()
 
+    def read_again(self) -> None:
+        """Make the bench anew for the same study: something beside its file has changed, such as its seal."""
+        self._fetch()
+
     def _open(self, study: Study, should_stop: Callable[[], bool]) -> Workbench:
         from study.analysis import Workbench  # numpy, scipy and DuckDB, only once the first screen stands
 

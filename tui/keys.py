@@ -136,6 +136,7 @@ _ASSIGNMENT: Final[tuple[Key, ...]] = (
     _key("assignment.back", "escape", "Esc", "put back", "Put the line back on the study's cutoff."),
     _key("assignment.cutoff", "c", "c", "type", "Type the cutoff.", edits=True),
     _key("assignment.side", "s", "s", "side", "Change which side is treated, and where a unit on the line falls.", edits=True),
+    _key("assignment.sites", "e", "e", "sites", "Sites and their cutoffs as a table: set in place, pasted, or read from a file or a column."),
     _key("assignment.zoom", "z", "z", "zoom", "See all of the score, or only what is near the line."),
     _key("assignment.numbers", "t", "t", "table", "The numbers behind the picture as a table."),
 )  # fmt: skip
@@ -157,6 +158,7 @@ _EFFECT: Final[tuple[Key, ...]] = (
     _key("effect.interval", "i", "i", "interval", "Let the next interval lead: robust, bias-aware or plain.", edits=True),
     _key("effect.donut", "d", "d", "donut", "Leave out the rows nearest to the line: type how near.", edits=True),
     _key("effect.covariates", "c", "c", "covariates", "Let the covariates adjust the headline, or not.", edits=True),
+    _key("effect.seal", "S", "S", "seal", "Seal the plan: freeze the study's choices, after which the outcome is shown.", footer=False),
     _key("effect.numbers", "t", "t", "table", "The numbers behind the picture as a table."),
     _key("effect.weights", "e", "e", "each unit", "Draw how much each unit counts on both sides, with the numbers as a table.", footer=False),
     _key("effect.seen", "l", "l", "looked at", "Every width you stood at in this sitting; Enter goes back to one.", footer=False),

@@ -184,6 +184,8 @@ class AssignmentScreen(Room):
         if study.assignment.rule != "cutoff":
             from study.wording import rule_sentence
 
+            if study.assignment.rule == "cutoffs":
+                return f"{rule_sentence(study)} e shows the sites with their cutoffs, to be set, pasted or read from a file."
             return (
                 f"{rule_sentence(study)} This study's rule is “{study.assignment.rule}”: this version draws and moves one "
                 "cutoff only, so edit the rule in the study file."
@@ -245,6 +247,9 @@ class AssignmentScreen(Room):
         study = self.study
         if study is None:
             return "No study is open: f on the Data screen opens one"
+        if action == "sites":
+            named = study.columns.site is not None and study.columns.score is not None
+            return "" if named else "No site yet: on the Data screen i makes a column the site, s the score"
         if study.assignment.rule != "cutoff":
             return f"The rule is “{study.assignment.rule}”: this version moves one cutoff only"
         if action == "side":
@@ -256,6 +261,12 @@ class AssignmentScreen(Room):
         if action == "back" and self.line is None:
             return "The line was not moved"
         return ""
+
+    def do_sites(self) -> None:
+        """Key e."""
+        from tui.screens.sites_page import SitesPage
+
+        self.bench.push_screen(SitesPage())
 
     def _move(self, steps: int) -> None:
         assert self._reading is not None and self.cutoff is not None

@@ -90,6 +90,8 @@ class EffectKeys(Room):
             return "No study is open: f on the Data screen opens one"
         if action in ("choices", "kernel", "order", "interval", "donut"):
             return ""
+        if action == "seal":
+            return self._why_not_seal()
         if action == "covariates":
             return "" if desk.study.columns.covariates else "This study names no covariates"
         if action == "site":
@@ -166,6 +168,46 @@ class EffectKeys(Room):
             return ""
 
         self.ask("Bandwidth", f"{now:.4g}", take, hint="In units of the score, the same on both sides.")
+
+    def _why_not_seal(self) -> str:
+        from study.plan import plan_path
+
+        desk, workbench = self.bench.desk, self.bench.workbench
+        if desk is not None and plan_path(desk.study).exists():
+            return "The plan is sealed already; what differs from it now is marked"
+        if workbench is None:
+            return "The study is not complete, or its data are still being read"
+        return "" if desk is None or not desk.why_read_only else desk.why_read_only
+
+    def do_seal(self) -> None:
+        """Key S: asked back once, since a seal can't be taken back."""
+
+        def take(text: str) -> str:
+            if text.lower() != "seal":
+                return "Type the word seal, or press Esc to leave the plan open."
+            self._seal()
+            return ""
+
+        self.ask(
+            "Seal the plan? Later changes are marked as departures from it.",
+            "",
+            take,
+            hint="Type seal and press Enter.",
+        )
+
+    def _seal(self) -> None:
+        from study.commands.seal import freeze  # the same act as on the command line
+        from study.errors import StudyError
+
+        desk, workbench = self.bench.desk, self.bench.workbench
+        assert desk is not None and workbench is not None  # `why_not` saw to it
+        try:
+            sealed = freeze(desk.study, fingerprint=workbench.assigned.fingerprint)
+        except StudyError as error:
+            self.bench.tell(f"{error.what} {error.do}", warning=True)
+            return
+        self.bench.read_again()
+        self.bench.tell(f"The plan is sealed, by {sealed.by}. The outcome may be seen now.")
 
     def do_choices(self) -> None:
         """Key f."""

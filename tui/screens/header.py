@@ -5,6 +5,7 @@ from __future__ import annotations
 from pathlib import Path
 from typing import TYPE_CHECKING, Final
 
+from study.plan import plan_path
 from tui.keys import PLACES
 from tui.look import Ink
 from tui.screens.lines import Line, Part
@@ -54,7 +55,8 @@ def _state(bench: CutbankApp) -> list[Part]:
     if desk is None:
         return []
     # In the place of the plan's state, not beside it: a title that shrinks and grows with every read would flicker.
-    parts: list[Part] = [(f"{bench.progress} ...", Ink.ACCENT) if bench.progress else ("unsealed", Ink.MUTED)]
+    plan = "sealed" if plan_path(desk.study).exists() else "unsealed"
+    parts: list[Part] = [(f"{bench.progress} ...", Ink.ACCENT) if bench.progress else (plan, Ink.MUTED)]
     if desk.why_read_only:
         parts.append(("  read only", Ink.WARNING))
     elif desk.problem:

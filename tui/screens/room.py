@@ -45,7 +45,7 @@ class Room(Screen[None]):
         yield Lines(id="top")
         with Vertical(id="body"):
             yield from self.body()
-        yield Widget(id="room-for-foot")
+        yield Lines(id="room-for-foot")  # blank: a bare widget would show its own name
         yield Foot(id="foot")
 
     def body(self) -> Iterator[Widget]:
@@ -265,6 +265,7 @@ class Foot(Vertical):
         entry.value = value
         entry.cursor_position = len(value)
         entry.focus()
+        entry.select_all()  # what is typed replaces what stands there; an arrow keeps it
 
     def say_hint(self, words: str, *, warning: bool = False) -> None:
         """Say something under the field."""
