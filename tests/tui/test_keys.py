@@ -82,7 +82,9 @@ def test_the_list_goes_between_its_marks_and_nowhere_else() -> None:
 
 def test_the_readme_is_up_to_date() -> None:
     text = (Path(__file__).parents[2] / "README.md").read_text(encoding="utf-8")
-    assert with_key_list(text) == text, "a key has changed: run `python -m tui.keys` in the root of the repository"
+    assert with_key_list(text) == text, (
+        "a key has changed: run `python -m tui.keys` in the root of the repository"
+    )
 
 
 def test_an_unknown_key_is_an_error() -> None:

@@ -99,7 +99,7 @@ class Room(Screen[None]):
 
     def refresh_all(self) -> None:
         """Bring header, body and keys up to date."""
-        if not self.query(Foot):
+        if not self.query(Foot) or not self.query("#body > *"):
             return  # asked before the screen was composed: its mounting comes back here
         self.refresh_top()
         self.refresh_view()
