@@ -56,6 +56,7 @@ def value_of(option: Option) -> st.SearchStrategy[object]:
         "number list": st.lists(finite, unique=True, max_size=4).map(lambda found: tuple(sorted(found))),
         "number table": st.dictionaries(names, number, max_size=4),
         "whole number or text": st.integers(1, 99) | names,
+        "word or file": st.sampled_from((*option.allowed, "ours.toml")),
     }[option.kind]
 
 
