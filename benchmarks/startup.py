@@ -62,7 +62,7 @@ def main() -> None:
         copy = Path(folder) / "hulls"
         shutil.copytree(STUDY, copy)
         first = statistics.median(paint_time(copy / "study.toml", b"Assignment") for _ in range(5))
-        effect = statistics.median(paint_time(copy / "study.toml", "robust".encode()) for _ in range(5))
+        effect = statistics.median(paint_time(copy / "study.toml", b"robust") for _ in range(5))
     print("| what | seconds | limit |\n|---|---:|---:|")
     print(f"| bare Python | {bare:.3f} | |")
     print(f"| cutbank --help, above bare Python | {helped - bare:.3f} | 0.3 |")
