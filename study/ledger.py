@@ -215,8 +215,8 @@ def parse_ledger(content: bytes) -> Reading:
     return Reading(entries=tuple(entries), problems=tuple(problems), head=head)
 
 
-def summary(reading: Reading, study: Study, *, sealed: bool) -> str:
-    """How much was looked at, in a sentence or two."""
+def summary(reading: Reading, study: Study, *, sealed: bool, departs: bool = False) -> str:
+    """How much was looked at, in a sentence or two; a plan that was departed from is not said to be what is reported."""
     if not reading.looks:
         said = "No estimate was looked at before."
     else:
@@ -226,7 +226,10 @@ def summary(reading: Reading, study: Study, *, sealed: bool) -> str:
             f"{'specification' if ways == 1 else 'different specifications'} "
             f"{'was' if estimates == 1 else 'were'} looked at"
         )
-        said += "; the planned one is reported." if sealed else "; no plan was sealed beforehand."
+        if departs:
+            said += "; what is reported departs from the plan."
+        else:
+            said += "; the planned one is reported." if sealed else "; no plan was sealed beforehand."
     if reading.problems:
         said += " The ledger is not whole: " + " ".join(reading.problems)
     return said

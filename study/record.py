@@ -54,7 +54,12 @@ class Record:
                 said.append("Nothing departs from it.")
             said += [f"Departure from the plan: {departure.sentence}" for departure in self.departures]
         if self.ledger is not None:
-            said.append(summary(self.ledger, study, sealed=self.sealed is not None))
+            said.append(
+                summary(self.ledger, study, sealed=self.sealed is not None, departs=bool(self.departures))
+            )
+            said.append(
+                "The ledger holds runs and releases; what was looked at on the bench is not in it yet."
+            )
         elif self.reason is not None:
             said.append(self.reason)
         return tuple(said)

@@ -122,6 +122,9 @@ def test_the_summary_in_words(study: Study) -> None:
     assert summary(read_ledger(study), study, sealed=True) == (
         "3 estimates under 2 different specifications were looked at; the planned one is reported."
     )
+    assert summary(read_ledger(study), study, sealed=True, departs=True).endswith(
+        "looked at; what is reported departs from the plan."
+    )
     assert summary(read_ledger(study), study, sealed=False).endswith(
         "looked at; no plan was sealed beforehand."
     )
