@@ -13,6 +13,7 @@ from study.analysis import Workbench
 from study.comparison import compare, order_of
 from study.comparison_words import headline, site_texts
 from study.document import load_study
+from tui.look import Look
 from tui.screens.compare import CompareScreen
 from tui.screens.effect import EffectScreen
 from tui.screens.widths import next_width
@@ -195,3 +196,17 @@ async def test_other_outcome_table_words_and_plain_text(tmp_path: Path) -> None:
         assert "Birch [red] at 45" in said and "Dot at 50 no local estimate" in said
         await press(pilot, "w", *"7", "enter")
         assert "all within 7" in shown(pilot)
+
+
+async def test_in_ascii_every_mark_is_ascii_and_small_terminals_keep_the_numbers(tmp_path: Path) -> None:
+    app = bench(make(tmp_path), look=Look(ascii_only=True))
+    async with app.run_test(size=(80, 24)) as pilot:
+        await settled(pilot)
+        await press(pilot, "4")
+        assert shown(pilot).isascii()
+        assert re.search(r"-\*-|-o-*\*|\*-", shown(pilot))
+        await pilot.resize_terminal(54, 16)
+        await settled(pilot)
+        assert (
+            "+" in shown(pilot) and "Ash" in shown(pilot) and "no local" not in shown(pilot).splitlines()[0]
+        )

@@ -27,6 +27,8 @@ if TYPE_CHECKING:
     from tui.screens.compare_work import Compared, Question
 
 _SORTS = ("name", "cutoff", "effect", "rows")
+_LEGEND = "● effect  ◇ drawn toward the mean  ┊ pooled  │ nought"
+_LEGEND_ASCII = "* effect  o drawn toward the mean  : pooled  | nought"
 _MANY_LINES = 34  # from this height on, what the sites say together stands under them
 
 
@@ -40,6 +42,8 @@ class CompareScreen(Room):
     CompareScreen #all { margin: 1 0; }
     CompareScreen #one { margin: 1 0 0 0; }
     CompareScreen #together { margin: 1 0 0 0; }
+    CompareScreen.low #all { margin: 0; }
+    CompareScreen.low #one { display: none; }
     """
 
     def __init__(self) -> None:
@@ -155,7 +159,8 @@ class CompareScreen(Room):
         return self._axis or wanted
 
     def on_resize(self, event: events.Resize) -> None:
-        """Lay out anew."""
+        """Lay out anew; on a low terminal the sites themselves come first."""
+        self.set_class(event.size.height < 20, "low")
         self.call_after_refresh(self.refresh_all)
 
     def refresh_view(self) -> None:
@@ -181,7 +186,7 @@ class CompareScreen(Room):
                 f"going to {width_text(self.width) if self.width is not None else 'their own widths'} ..."
             )
         legend: Line = [
-            ("● effect  ◇ drawn toward the mean  ┊ pooled  │ nought", Ink.MUTED),
+            (_LEGEND_ASCII if self.bench.look.ascii_only else _LEGEND, Ink.MUTED),
         ]
         words: list[Line] = [[(line, Ink.STRONG)] for line in wrapped(compared.headline(), width)]
         self.query_one("#all", Lines).show([*words, [(f"{within}, by {self.sorted_by}", Ink.TEXT)], legend])
