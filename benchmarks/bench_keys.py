@@ -70,7 +70,8 @@ def wait_for(words: str, seconds: float) -> None:
 
 
 def main(rows: int) -> None:
-    with tempfile.TemporaryDirectory() as folder:
+    # The program is killed at the end and may still be saving where it stood.
+    with tempfile.TemporaryDirectory(ignore_cleanup_errors=True) as folder:
         path = write_study(Path(folder), rows)
         started = time.perf_counter()
         tmux("new", "-d", "-x", "120", "-y", "40", f"cd {ROOT} && {sys.executable} -m study.cli {path}")
