@@ -127,7 +127,7 @@ class SafeApp(WireApp[Result]):
 
     def _fault_in_loop(self, loop: asyncio.AbstractEventLoop, context: dict[str, Any]) -> None:
         error = context.get("exception")
-        if isinstance(error, Exception) and self._running:
+        if isinstance(error, Exception) and self._running and not self._exit:  # widgets go first when leaving
             self.call_later(partial(_raise, error))  # in the app's own queue, where every fault ends alike
         # Anything else is the loop's talk about its own affairs; its default would write over the screen.
 

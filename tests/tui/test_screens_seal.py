@@ -40,3 +40,19 @@ async def test_a_sealed_plan_is_not_sealed_twice(tmp_path: Path) -> None:
         await press(pilot, "S")
         assert "sealed already" in shown(pilot)
     assert (tmp_path / "study.plan.json").read_bytes() == before
+
+
+async def test_a_choice_that_differs_from_the_plan_is_marked_and_its_return_unmarked(tmp_path: Path) -> None:
+    path = make_study(tmp_path, STUDY.replace("masked = false", "masked = true"))
+    app = bench(path)
+    async with app.run_test(size=SIZE) as pilot:
+        await settled(pilot)
+        await press(pilot, "3", "S", *"seal", "enter")
+        await settled(pilot)
+        assert "as planned" in shown(pilot) and "departs" not in shown(pilot)
+        await press(pilot, "k")
+        assert "departs from plan" in shown(pilot)
+        await press(pilot, "right")  # looking elsewhere is no departure, and takes none away
+        assert "departs from plan" in shown(pilot)
+        await press(pilot, "u")
+        assert "as planned" in shown(pilot)

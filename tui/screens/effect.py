@@ -224,8 +224,8 @@ class EffectScreen(EffectKeys):
 
     def _refresh_words(self) -> None:
         width = self.size.width - 2
-        if width <= 0:
-            return
+        if width <= 0 or not self.query("#work"):
+            return  # asked before the screen was composed: its mounting comes back here
         desk, standing = self.bench.desk, self.standing
         shown = standing is not None and desk is not None
         self.query_one("#work").display = shown or self.prepared is not None

@@ -132,8 +132,7 @@ def _choice(study: Study, name: str, why_not: str) -> Choice:
         value=_shown(value),
         allowed=allowed,
         typed=typed,
-        help=option.help,
-        why_not=why_not,
+        why_not=why_not,  # the help stands whole below the form
     )
 
 

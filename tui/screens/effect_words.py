@@ -144,7 +144,9 @@ def choices_lines(study: Study, width: int) -> list[Line]:
         parts.append(f"donut {chosen.donut:g}")
     if study.columns.covariates:
         parts.append("covariates on" if chosen.adjust else "covariates off")
-    return [[(line, Ink.MUTED)] for line in wrapped(", ".join(parts), width)]
+    # A choice is not broken over two lines: "covariates" at the end of one would say the opposite of "off" on the next.
+    whole = ", ".join(part.replace(" ", "\N{NO-BREAK SPACE}") for part in parts)
+    return [[(line, Ink.MUTED)] for line in wrapped(whole, width)]
 
 
 def all_text(standing: Standing, study: Study) -> list[str]:

@@ -5,7 +5,9 @@ from __future__ import annotations
 from pathlib import Path
 from typing import TYPE_CHECKING, Final
 
-from study.plan import plan_path
+from study.document import Study
+from study.errors import StudyError
+from study.plan import departures, plan_path
 from tui.keys import PLACES
 from tui.look import Ink
 from tui.screens.lines import Line, Part
@@ -55,8 +57,9 @@ def _state(bench: CutbankApp) -> list[Part]:
     if desk is None:
         return []
     # In the place of the plan's state, not beside it: a title that shrinks and grows with every read would flicker.
-    plan = "sealed" if plan_path(desk.study).exists() else "unsealed"
-    parts: list[Part] = [(f"{bench.progress} ...", Ink.ACCENT) if bench.progress else (plan, Ink.MUTED)]
+    parts: list[Part] = [
+        (f"{bench.progress} ...", Ink.ACCENT) if bench.progress else _plan_state(bench, desk.study)
+    ]
     if desk.why_read_only:
         parts.append(("  read only", Ink.WARNING))
     elif desk.problem:
@@ -66,3 +69,16 @@ def _state(bench: CutbankApp) -> list[Part]:
     else:
         parts.append(("  saved" if desk.is_saved else "  saving", Ink.MUTED))
     return parts
+
+
+def _plan_state(bench: CutbankApp, study: Study) -> Part:
+    """Whether the plan is sealed, and once the data are there whether the study still says what it says."""
+    if not plan_path(study).exists():
+        return "unsealed", Ink.MUTED
+    if bench.workbench is None:
+        return "sealed", Ink.MUTED
+    try:
+        changed = departures(study, bench.workbench.assigned.fingerprint)
+    except StudyError:
+        return "plan unusable", Ink.WARNING
+    return ("departs from plan", Ink.WARNING) if changed else ("as planned", Ink.MUTED)

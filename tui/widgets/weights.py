@@ -78,5 +78,5 @@ class WeightsChart(PlotWidget):
         below, above = self._sides
         area.x_axis(heavy=(-below.width, above.width), labels_shift=self._cutoff, name=self._score)
         legend = "━ estimate  ╌ bias-corrected"
-        canvas.text(0, 0, "counts as so many", Ink.STRONG)
-        canvas.text(max(19, left + width - len(legend)), 0, legend, Ink.MUTED)
+        canvas.text(0, 0, "one unit counts as", Ink.STRONG)
+        canvas.text(max(20, left + width - len(legend)), 0, legend, Ink.MUTED)
