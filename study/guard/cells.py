@@ -18,7 +18,7 @@ import numpy as np
 
 from estimation.arrays import Codes, Mask, Matrix
 
-_MOST: Final = 16  # dimensions tried in full; beyond it a set is refused for want of certainty
+_MOST: Final = 50_000  # choices tried; beyond them a set is refused for want of certainty
 _ROUNDING: Final = 1e-7
 _NEAR: Final = 1e-5
 
@@ -82,8 +82,8 @@ def exposes(incidence: Matrix, sizes: Codes, threshold: int) -> bool:
     -----
     A group under the threshold is made of small atoms only. The combinations c of sets that leave out every large atom
     solve c A_large = 0; what they make of the small atoms, c A_small, is a space of some dimension d. In reduced form
-    each of its 0/1 vectors is known by its d leading entries: all 2^d are tried. With a d too large to try, the answer
-    is yes.
+    each of its 0/1 vectors is known by its d leading entries, so that all choices of leading atoms are tried that stay
+    under the threshold themselves. With too many to try, the answer is yes.
     """
     incidence, sizes = _coarse(incidence, sizes)
     small = sizes < threshold
@@ -92,27 +92,46 @@ def exposes(incidence: Matrix, sizes: Codes, threshold: int) -> bool:
     space = _span(_left_null(incidence[:, ~small]) @ incidence[:, small])
     if not len(space):
         return False  # no combination of small atoms alone
-    if len(space) > _MOST:
+    basis, leading = _reduced(space)
+    chosen = _choices(sizes[small][leading], threshold)
+    if chosen is None:
         return True
-    basis = _reduced(space)
-    leading = (np.arange(1, 2 ** len(basis))[:, None] >> np.arange(len(basis))) & 1
-    groups = leading @ basis
-    whole = np.all(np.abs(groups - np.round(groups)) < _NEAR, axis=1)
-    groups = np.round(groups)
-    whole &= np.all((groups == 0.0) | (groups == 1.0), axis=1)
-    return bool(np.any(groups[whole] @ sizes[small] < threshold))
+    for start in range(0, len(chosen), 4096):
+        groups = chosen[start : start + 4096] @ basis
+        whole = np.all((np.abs(groups) < _NEAR) | (np.abs(groups - 1.0) < _NEAR), axis=1)
+        if np.any(np.round(groups[whole]) @ sizes[small] < threshold):
+            return True
+    return False
 
 
-def _reduced(space: Matrix) -> Matrix:
-    """Reduced row echelon form of independent rows, the largest entry leading."""
-    basis = space.copy()
+def _reduced(space: Matrix) -> tuple[Matrix, list[int]]:
+    """(reduced row echelon form of independent rows, the column of each row's leading one)."""
+    basis, leading = space.copy(), []
     for i in range(len(basis)):
         j = int(np.argmax(np.abs(basis[i])))
+        leading.append(j)
         basis[i] /= basis[i, j]
-        for other in range(len(basis)):
-            if other != i:
-                basis[other] -= basis[other, j] * basis[i]
-    return basis
+        others = np.arange(len(basis)) != i
+        basis[others] -= np.outer(basis[others, j], basis[i])
+    return basis, leading
+
+
+def _choices(sizes: Codes, threshold: int) -> Matrix | None:
+    """Every choice of one or more atoms that stays under the threshold, as rows of 0 and 1; None with too many."""
+    found: list[tuple[int, ...]] = []
+    stack: list[tuple[tuple[int, ...], int]] = [((), 0)]
+    while stack:
+        taken, size = stack.pop()
+        for i in range(taken[-1] + 1 if taken else 0, len(sizes)):
+            if size + int(sizes[i]) < threshold:
+                found.append((*taken, i))
+                stack.append((found[-1], size + int(sizes[i])))
+        if len(found) > _MOST:
+            return None
+    chosen = np.zeros((len(found), len(sizes)))
+    for row, taken in enumerate(found):
+        chosen[row, list(taken)] = 1.0
+    return chosen
 
 
 def _atoms(sets: Sequence[Mask]) -> tuple[Matrix, Codes]:

@@ -100,7 +100,8 @@ def _sweep(effect: Effect, table: Table) -> tuple[SweepPicture, ...]:
     return (
         SweepPicture(
             name=f"widths-{effect.outcome}",
-            title=f"{clean(effect.outcome)}: the effect by bandwidth, with its {percent(effect.choices.level)} interval",
+            title=f"{clean(effect.outcome)}: the effect by bandwidth, with its {percent(effect.choices.level)} "
+            f"{effect.choices.interval} interval",
             across="bandwidth",
             up=f"effect{unit}",
             width=width,
@@ -150,13 +151,14 @@ def _score(asked: Asked, effect: Effect) -> ScorePicture:
             decisions.ask_count(key, f"rows {side} from {low:g} to {high:g} from the line", rows)
             keys.append((key, side, low, high, rows))
     decisions.decide()
-    bars = []
+    bars, hidden = [], []
     for key, side, low, high, rows in keys:
         decisions.count_text(key)
+        start, end = (low, high) if side == "above" else (-high, -low)
         if decisions.shows(key):
-            sign = 1.0 if side == "above" else -1.0
-            ends = sorted((sign * low, sign * high))
-            bars.append((ends[0], ends[1], profile.rounded_count(decisions.size(rows))))
+            bars.append((start, end, profile.rounded_count(decisions.size(rows))))
+        else:
+            hidden.append((start, end))
     score = clean(asked.result.study.columns.score or "score")
     border = effect.kind == "boundary"
     return ScorePicture(
@@ -168,5 +170,6 @@ def _score(asked: Asked, effect: Effect) -> ScorePicture:
         if effect.cutoff is not None
         else f"{score} less its cutoff",
         bars=tuple(sorted(bars)),
+        hidden=tuple(sorted(hidden)),
         cutoff=effect.cutoff or 0.0,
     )

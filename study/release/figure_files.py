@@ -6,6 +6,8 @@ import io
 from collections.abc import Sequence
 from typing import TYPE_CHECKING, Any, Final
 
+import numpy as np
+
 from study.release.material import EffectPicture, Picture, ScorePicture, SitesPicture, SweepPicture
 
 if TYPE_CHECKING:
@@ -84,7 +86,11 @@ def _effect(axes: Axes, picture: EffectPicture) -> None:
     cutoff = picture.cutoff
     for side in (picture.curve.below, picture.curve.above):
         axes.fill_between(side.x + cutoff, side.low, side.high, color=_BAND, linewidth=0)
-        axes.plot(side.x + cutoff, side.fit, color=_LINE, linewidth=1.6)
+        # A straight fit is drawn from its ends: its rounded points would make it a flight of steps.
+        straight = np.linspace(side.fit[0], side.fit[-1], len(side.fit))
+        bend = float(np.max(np.abs(side.fit - straight)))
+        flat = bend <= 0.02 * float(np.max(side.high - side.low))
+        axes.plot(side.x + cutoff, straight if flat else side.fit, color=_LINE, linewidth=1.6)
     axes.plot(
         cutoff - picture.below.centre, picture.below.mean, "o", color=_INK, markerfacecolor="white",
         markersize=5, label="mean of a bin below",
@@ -141,6 +147,13 @@ def _score(axes: Axes, picture: ScorePicture) -> None:
             low + picture.cutoff, rows, width=high - low, align="edge", linewidth=0.6, edgecolor="white",
             color=_BAND if below else _MUTED,
         )  # fmt: skip
+    if picture.hidden:
+        middles = [0.5 * (low + high) + picture.cutoff for low, high in picture.hidden]
+        axes.plot(
+            middles, [0.025] * len(middles), "x", color=_MUTED, markersize=4, label="not shown",
+            transform=axes.get_xaxis_transform(),
+        )  # fmt: skip
+        axes.legend(frameon=False, fontsize=8, loc="upper right")
     axes.axvline(picture.cutoff, color=_INK, linewidth=0.8, linestyle=(0, (4, 3)))
     axes.set_xlabel(picture.across)
     axes.set_ylabel("rows")

@@ -81,12 +81,13 @@ class SitesPicture:
 
 @dataclass(frozen=True, slots=True, kw_only=True)
 class ScorePicture:
-    """Rows by score; a bar that may not be shown is left out."""
+    """Rows by score; a bar that may not be shown is marked as such, whatever its height."""
 
     name: str
     title: str
     across: str
     bars: tuple[tuple[float, float, int], ...]  # (from, to, rows as they may be shown)
+    hidden: tuple[tuple[float, float], ...]  # (from, to)
     cutoff: float
 
 

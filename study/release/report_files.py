@@ -39,7 +39,7 @@ th {{ font-weight: 600; border-bottom: 1px solid #767676; }}
 .n {{ text-align: right; font-variant-numeric: tabular-nums; white-space: nowrap; }}
 th.n {{ white-space: normal; }}
 .note {{ font-size: .78rem; color: #555; margin-top: 0; }}
-figure {{ margin: 1.2rem 0; }} img {{ max-width: 100%; height: auto; }}
+figure {{ margin: 1.2rem 0; }} img {{ width: 100%; max-width: 44rem; height: auto; }}
 @media print {{ body {{ max-width: none; padding: 0; font-size: 11pt; }} h2, h3, caption {{ break-after: avoid; }}
   figure, tr {{ break-inside: avoid; }} .wide {{ overflow: visible; }} table {{ font-size: 8pt; }}
   th, td {{ padding-right: .45rem; }} @page {{ margin: 18mm 16mm; }} }}

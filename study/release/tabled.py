@@ -51,7 +51,7 @@ def effects_table(asked: Asked) -> Table:
     """Every effect that is shown, with what it rests on."""
     decisions, profile = asked.decisions, asked.decisions.profile
     rows: list[tuple[str, ...]] = []
-    for effect in asked.effects:
+    for effect in in_order(asked.effects, asked):
         scale = 100.0 if effect.binary else 1.0
         low, high = effect.leading
         key = key_of(effect)
@@ -73,7 +73,7 @@ def effects_table(asked: Asked) -> Table:
                 decisions.count_text(f"{key}|above"),
             )
         )
-    for effect in asked.withheld:
+    for effect in in_order(asked.withheld, asked):
         if not any(
             d.what.startswith(f"{clean(effect.outcome)}, {clean(effect.where)}: effect")
             for d in decisions.made
@@ -91,6 +91,19 @@ def effects_table(asked: Asked) -> Table:
         numeric=(2, 3, 4, 5, 8, 9, 10, 11),
         note="Positive where the treated side is higher. The interval is the one that leads for this effect.",
     )  # fmt: skip
+
+
+def in_order(effects: Sequence[Effect], asked: Asked) -> list[Effect]:
+    """By outcome, the headline before its sites: the order in which the guard was asked tells their sizes."""
+    outcomes, sites = asked.bench.outcomes, asked.bench.sites
+    return sorted(
+        effects,
+        key=lambda e: (
+            outcomes.index(e.outcome),
+            not headline(e),
+            0 if headline(e) else sites.index(e.where),
+        ),
+    )
 
 
 def site_tables(asked: Asked) -> tuple[Table, ...]:
@@ -189,7 +202,7 @@ def take_up_table(asked: Asked) -> Table | None:
     if asked.result.assigned.take_up is None:
         return None
     rows: list[tuple[str, str]] = []
-    for effect in asked.effects:
+    for effect in in_order(asked.effects, asked):
         found = effect.reading.take_up
         if found is not None and effect.outcome == asked.bench.outcomes[0]:
             rows += _first_stage(effect, decisions)
