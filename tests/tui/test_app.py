@@ -299,7 +299,7 @@ def test_a_lost_connection_saves_and_gives_the_terminal_back(tmp_path: Path, nam
     with Terminal([sys.executable, "-c", code], size=SIZE, environment=environment) as terminal:
         terminal.wait_for("Robust", patience=30)
         terminal.type("k")
-        terminal.wait_for("uniform kernel", patience=30)
+        terminal.wait_for("uniform\N{NO-BREAK SPACE}kernel", patience=30)
         terminal.type("2")
         terminal.wait_for("A unit is treated", patience=30)
         number = getattr(signal, f"SIG{name}")
